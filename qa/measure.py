@@ -1,0 +1,1 @@
+"""Run = series + plate + recipe -> readings."""

@@ -1,0 +1,1 @@
+"""The whole of an ingest on one page: intake -> locate -> fit -> measure -> store -> judge."""
