@@ -1,1 +1,209 @@
-"""The whole of an ingest on one page: intake -> locate -> fit -> measure -> store -> judge."""
+"""The whole of an ingest on one page: intake -> locate -> fit -> measure -> store -> judge -> report.
+
+Each run is recorded in one transaction before the next is begun, and judged after all are in: killed at any instant,
+a rerun finds what was recorded, takes the rest and ends in the same state as an unbroken run.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Iterable, Sequence
+from dataclasses import dataclass, replace
+from datetime import date, datetime
+from pathlib import Path
+from typing import TYPE_CHECKING
+
+from qa import intake
+from qa.intake.series import Held, Session
+from qa.measure import measure
+from qa.methods import fingerprint
+from qa.reading import Measurement
+from qa.site import Site
+from qa.store import Book, open_book
+from qa.temperature import FROM_COMMAND, FROM_LOG, FROM_TABLE, RunTemperature
+from qa.words import Consequence, Remark, Verdict
+
+if TYPE_CHECKING:
+    from qa.trend import Judgement
+
+Progress = Callable[[str, int, int], None]  # what is being done, how many are done, out of how many
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class RunOutcome:
+    """One run of this ingest, as it now stands in the book."""
+
+    run: str
+    generation: int
+    scanner: str
+    phantom: str
+    acquired: datetime
+    measurement: Measurement
+    verdict: Verdict
+    reasons: tuple[str, ...]
+    report: Path | None
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class IngestOutcome:
+    """What an ingest did with every file it saw: seen = used + duplicate + held."""
+
+    runs: tuple[RunOutcome, ...]
+    held: tuple[Held, ...]
+    seen: int
+    used: int
+    duplicate: int
+    front_page: Path | None
+
+
+def ingest(
+    site: Site,
+    paths: Sequence[Path],
+    *,
+    celsius: float | None = None,
+    progress: Progress | None = None,
+    report: bool = True,
+    today: date | None = None,
+) -> IngestOutcome:
+    """Take in folders and files of DICOM: everything that is not known yet is measured, stored, judged and reported."""
+    tell = progress or _silent
+    with open_book(site) as book:
+        book.note_limits(site.limits)
+        taken = intake.gather(paths, site, known=book.known_files(), progress=progress)
+        held = list(taken.held)
+        recorded: dict[str, tuple[Session, Measurement, int]] = {}
+        sessions = sorted(taken.sessions, key=lambda one: one.acquired)
+        for number, session in enumerate(sessions):
+            tell("measuring runs", number, len(sessions))
+            earlier = book.run_files(session.run)
+            whole = intake.merge(session, earlier, site) if earlier else session
+            measurement, also_held = measure_session(book, site, whole, celsius)
+            held += also_held
+            whole = _without(whole, also_held)
+            reason = "more files of this run arrived" if earlier else "first measured"
+            generation = book.record(whole, measurement, method_fingerprint=fingerprint(), reason=reason)
+            recorded[whole.run] = (whole, measurement, generation)
+        tell("measuring runs", len(sessions), len(sessions))
+        book.hold(held)
+        book.release([record.sha256 for session, _, _ in recorded.values() for record in session.files])
+        verdicts = judge_book(book, site)
+        front = None
+        if report:
+            tell("writing pages", 0, 1)
+            front = write_report(site, book=book, runs=list(recorded) if recorded else None, today=today)
+            tell("writing pages", 1, 1)
+        outcomes = [_outcome(session, m, g, verdicts, front) for session, m, g in recorded.values()]
+    used = taken.seen - taken.duplicates - len(held)
+    return IngestOutcome(tuple(outcomes), tuple(held), taken.seen, used, taken.duplicates, front)
+
+
+def measure_session(
+    book: Book, site: Site, session: Session, celsius: float | None = None
+) -> tuple[Measurement, tuple[Held, ...]]:
+    """Load one run's series and measure them; a run for which no recipe is scheduled is void, with the reason."""
+    temperature = temperature_of(book, site, session, celsius)
+    schedule = site.schedule_for(session.scanner, session.phantom)
+    if schedule is None:
+        text = (
+            f"no [[schedule]] in site.toml joins scanner '{session.scanner}' and phantom '{session.phantom}', "
+            "so there is no recipe to measure by: add one and run 'vialbook remeasure'"
+        )
+        void = Remark("no-recipe", text, Consequence.VOID)
+        nothing = measure([], site.phantom(session.phantom).plate, session.field_t, temperature, (void,))
+        return nothing, ()
+    loaded = intake.load(session, schedule.recipe)
+    plate = site.phantom(session.phantom).plate
+    remarks = (*session.remarks, *loaded.remarks)
+    return measure(loaded.series, plate, session.field_t, temperature, remarks), loaded.held
+
+
+def temperature_of(book: Book, site: Site, session: Session, celsius: float | None) -> RunTemperature:
+    """The run's temperature: from the command, else from the book's log, else from temperatures.csv, else unknown."""
+    if celsius is not None:
+        return RunTemperature.measured(celsius, FROM_COMMAND)
+    logged = book.temperature_logged(session.scanner, session.acquired)
+    if logged is not None:
+        return RunTemperature.measured(logged, FROM_LOG)
+    tabled = site.celsius(session.scanner, session.acquired)
+    if tabled is not None:
+        return RunTemperature.measured(tabled, FROM_TABLE)
+    return RunTemperature.unknown(site.plausible_c)
+
+
+def judge_book(book: Book, site: Site) -> dict[str, Judgement]:
+    """Judge every run that has no verdict yet, and every later run of the same scanner and phantom.
+
+    Software and coil changes that the runs themselves show become log entries first. A verdict is stored only where
+    it is new or differs, so judging twice changes nothing.
+    """
+    from qa import trend
+
+    runs = book.runs()
+    waiting = runs[runs["verdict"].isna()]
+    if waiting.empty:
+        return {}
+    for entry in trend.log_entries_from_runs(runs):
+        book.add_log_entry(**entry)
+    log = book.log_entries()
+    judged: dict[str, Judgement] = {}
+    for (scanner, phantom), group in waiting.groupby(["scanner", "phantom"]):
+        history = book.readings(scanner=scanner, phantom=phantom)
+        own = runs[(runs["scanner"] == scanner) & (runs["phantom"] == phantom)]
+        since = group["acquired"].min()
+        asked = list(own.loc[own["acquired"] >= since, "run"])
+        judged |= trend.judge(
+            history, log, site.limits, runs=asked, run_table=own, baseline_runs=site.baseline_runs, zone=site.timezone
+        )
+    stored = runs.set_index("run")
+    for run, judgement in judged.items():
+        row = stored.loc[run]
+        if row["verdict"] != judgement.verdict or list(row["reasons"]) != list(judgement.reasons):
+            book.set_verdict(run, int(row["generation"]), judgement.verdict, judgement.reasons, judgement.limits_digest)
+    return judged
+
+
+def write_report(
+    site: Site,
+    *,
+    book: Book | None = None,
+    out: Path | None = None,
+    runs: list[str] | None = None,
+    single_file: bool = False,
+    today: date | None = None,
+) -> Path:
+    """Write the pages (of `runs` only, and those that speak of the whole site; None: all) and give the front page."""
+    from qa.report import write_pages
+
+    folder = out or site.folder / "pages"
+    day = today or datetime.now(site.timezone).date()
+    if book is not None:
+        return write_pages(book, site, folder, today=day, single_file=single_file, runs=runs)
+    with open_book(site, create=False) as opened:
+        return write_pages(opened, site, folder, today=day, single_file=single_file, runs=runs)
+
+
+def _without(session: Session, held: Iterable[Held]) -> Session:
+    """The session less the files that turned out to be unusable when their pixels were read."""
+    refused = {one.sha256 for one in held}
+    return replace(session, files=tuple(record for record in session.files if record.sha256 not in refused))
+
+
+def _outcome(
+    session: Session, measurement: Measurement, generation: int, verdicts: dict[str, Judgement], front: Path | None
+) -> RunOutcome:
+    judgement = verdicts[session.run]
+    page = front.parent / "runs" / f"{session.run}.html" if front is not None else None
+    return RunOutcome(
+        run=session.run,
+        generation=generation,
+        scanner=session.scanner,
+        phantom=session.phantom,
+        acquired=session.acquired,
+        measurement=measurement,
+        verdict=judgement.verdict,
+        reasons=tuple(judgement.reasons),
+        report=page if page is not None and page.exists() else None,
+    )
+
+
+def _silent(doing: str, done: int, total: int) -> None:
+    """No progress shown."""
