@@ -73,8 +73,8 @@ class PulsePair:
 
     excitation: Shape = "hamming-sinc"
     refocusing: Shape = "hamming-sinc"
-    lobes: float = 3.0  # time-bandwidth product of the pulses
-    refocusing_width: float = 1.2  # refocusing slice over excited slice
+    lobes: float = 4.0  # time-bandwidth product of the pulses
+    refocusing_width: float = 1.4  # refocusing slice over excited slice
 
 
 @dataclass(frozen=True, slots=True)
