@@ -1,0 +1,110 @@
+"""The promise about false alarms, shared out over all charts of a scanner.
+
+A promise is a number of false `watch` per scanner-year over everything that is judged, not per chart. Half of it
+goes to the smoothed charts (half of that to the common levels, half to the vials), a quarter to single readings
+beyond a limit, a quarter to whole runs that lie apart from the run before.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from functools import lru_cache
+
+import numpy as np
+
+from qa.trend.arl import chance_limit, ewma_limit_estimated
+from qa.trend.charts import ewma_level, ewma_spread
+from qa.trend.levels import Chartable
+from qa.trend.streams import Bools
+from qa.words import Floats
+
+WEIGHT = 0.2  # lambda of all smoothed charts: near the best for shifts of one sigma
+CUT = 3.0  # a value counts for at most three sigmas, so that one wild run is no drift
+_LOSS = 1.0 / 0.955
+
+
+@dataclass(frozen=True, slots=True)
+class Promise:
+    """False alarms per scanner-year, over all vials, quantities and charts of a scanner together."""
+
+    watch_per_year: float = 1.0
+    act_per_year: float = 0.25
+
+
+@dataclass(frozen=True, slots=True)
+class Shares:
+    """What the promise leaves for one chart or reading, given how many there are on the scanner."""
+
+    level_arl: float  # runs per false signal of one common level
+    vial_arl: float  # of one vial's chart
+    reading: float  # probability that one unchanged reading passes the chance limit
+    run: float  # probability that one unchanged level does, in one run
+
+
+def shares(promise: Promise, runs_per_year: float, levels: int, vials: int) -> Shares:
+    """Shares the promise out over `levels` common levels and `vials` streams."""
+    per_run = promise.watch_per_year / max(runs_per_year, 1.0)
+    return Shares(
+        level_arl=max(levels, 1) / (0.25 * per_run),
+        vial_arl=max(vials, 1) / (0.25 * per_run),
+        reading=0.25 * per_run / max(vials, 1),
+        run=0.25 * per_run / max(levels, 1),
+    )
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Smoothed:
+    """EWMA of a series in percent, its limit in percent (symmetric about 0), and where it signals."""
+
+    percent: Floats
+    limit: Floats
+    signal: Bools
+
+
+_GRID = (4.0, 6.0, 8.0, 12.0, 20.0, 40.0, 120.0, float("inf"))
+
+
+@lru_cache(maxsize=512)
+def _widths(arl: float, baseline_runs: float) -> tuple[float, ...]:
+    return tuple(ewma_limit_estimated(arl, WEIGHT, baseline_runs, freedom) for freedom in _GRID)
+
+
+def width(arl: float, baseline_runs: float, freedom: Floats) -> Floats:
+    """The chart's width for many degrees of freedom at once (interpolated in their inverse)."""
+    inverse = [0.0 if np.isinf(f) else 1.0 / f for f in _GRID]
+    return np.interp(1.0 / np.maximum(freedom, _GRID[0]), inverse[::-1], _widths(round(arl, 1), baseline_runs)[::-1])
+
+
+def smooth(series: Chartable, arl: float) -> Smoothed:
+    """EWMA chart of a level (r,) or of residuals (r, S) whose baseline and scatter were estimated.
+
+    Values are cut at three sigmas, and a signal needs two of the last three runs on its own side: one run alone
+    never makes a drift.
+    """
+    z = np.clip(series.percent / series.sd, -CUT, CUT)
+    level = ewma_level(z, WEIGHT)
+    count = np.cumsum(np.isfinite(z), axis=0).astype(np.float64)
+    runs = np.maximum(series.runs, 1.0) / _LOSS
+    kept = 1.0 - (1.0 - WEIGHT) ** count
+    spread = np.sqrt(ewma_spread(WEIGHT, count) ** 2 + kept**2 / runs)
+    widths = np.empty_like(level)
+    for number in np.unique(runs):
+        here = np.broadcast_to(runs == number, level.shape)
+        widths[here] = width(arl, float(number), np.broadcast_to(series.freedom, level.shape)[here])
+    limit = widths * spread
+    side = np.sign(level)
+    with np.errstate(invalid="ignore"):
+        agreeing = (z * side > 0.5).astype(np.int8)
+    recent = agreeing.copy()
+    recent[1:] += agreeing[:-1]
+    recent[2:] += agreeing[:-2]
+    signal = np.isfinite(z) & (np.abs(level) > limit) & (recent >= 2)
+    started = count > 0
+    return Smoothed(np.where(started, level * series.sd, np.nan), np.where(started, limit * series.sd, np.nan), signal)
+
+
+def beyond_chance(probability: float, freedom: Floats) -> Floats:
+    """The chance limit in sigmas for many degrees of freedom."""
+    grid = np.array([chance_limit(probability, f) for f in _GRID])
+    inverse = [0.0 if np.isinf(f) else 1.0 / f for f in _GRID]
+    return np.interp(1.0 / np.maximum(freedom, _GRID[0]), inverse[::-1], grid[::-1])
