@@ -7,6 +7,7 @@ a simulated run checks the fit rather than repeating it. Knows nothing of intake
 
 from __future__ import annotations
 
+from qa.simulate.growing import grow, simulate_one
 from qa.simulate.run import simulate_run
 from qa.simulate.truth import (
     Bubble,
@@ -31,6 +32,8 @@ __all__ = [
     "Surroundings",
     "VialRecord",
     "VialTruth",
+    "grow",
+    "simulate_one",
     "simulate_run",
     "vials_of",
 ]

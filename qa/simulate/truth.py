@@ -17,7 +17,7 @@ from collections.abc import Mapping
 from dataclasses import dataclass, field
 from datetime import datetime
 from pathlib import Path
-from typing import Literal
+from typing import Any, Literal
 
 from qa.site.plate import Plate
 from qa.words import Quantity
@@ -144,6 +144,12 @@ class RunTruth:
                 return vial
         raise KeyError(label)
 
+    def as_json(self) -> dict[str, Any]:
+        """Plain types only."""
+        plain = dataclasses.asdict(self)
+        plain["acquired"] = self.acquired.isoformat()
+        return plain
+
 
 @dataclass(frozen=True, slots=True)
 class VialRecord:
@@ -174,12 +180,12 @@ class RunRecord:
     noise: float  # standard deviation of one channel in stored units times slope
     vials: tuple[VialRecord, ...]
 
-    def as_json(self) -> dict[str, object]:
+    def as_json(self) -> dict[str, Any]:
         """Plain types only; paths relative to the run's folder."""
         plain = dataclasses.asdict(self)
+        plain["truth"] = self.truth.as_json()
         plain["folder"] = self.folder.name
         plain["files"] = [path.relative_to(self.folder).as_posix() for path in self.files]
-        plain["truth"]["acquired"] = self.truth.acquired.isoformat()
         return plain
 
 
