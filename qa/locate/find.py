@@ -5,6 +5,7 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
+from numpy.typing import NDArray
 
 from qa.locate.evidence import evidence, principal, resample
 from qa.locate.placement import NotLocated, Placement
@@ -24,9 +25,11 @@ from qa.locate.search import (
 from qa.site.plate import Plate
 from qa.words import Floats, Pixels
 
-SEEN = 0.42  # explained share of the variance from which a vial counts as seen
+SEEN = 0.25  # explained share of the variance from which a vial counts as seen
 MISSING_ALLOWED = 2
+MISSING_SHARE = 0.25  # … of many vials, more
 SURE = 2.0  # score by which the best labelling has to beat every other
+SURE_FIT = 12.0  # log-likelihood by which its centres have to fit better where the score does not tell
 SURE_SHARE = 0.06  # … and as a share of its own score
 _SMALLEST = 24  # voxels, shorter side
 
@@ -117,19 +120,30 @@ def _gap(points: Points, radii: Floats) -> float:
 
 def _decide(case: _Case, found: Placements, totals: Floats, shares: Floats) -> Placement | NotLocated:
     vials = len(case.design)
-    seen = shares[0] >= SEEN
-    needed = max(3, vials - MISSING_ALLOWED)
-    margin = float(totals[0] - totals[1]) if len(totals) > 1 else float(totals[0])
-    need = max(SURE, SURE_SHARE * float(totals[0]))
-    if seen.sum() < needed:
-        if seen.sum() < max(3, 0.5 * vials):
+    seen = shares >= SEEN
+    count = int(seen[0].sum())
+    needed = max(3, vials - max(MISSING_ALLOWED, int(MISSING_SHARE * vials)))
+    if count < needed:
+        if count < max(3, 0.5 * vials):
             return NotLocated("no-plate", f"nothing in the images is arranged like the plate '{case.plate.name}'")
-        lost = ", ".join(vial.label for vial, there in zip(case.plate.vials, seen, strict=True) if not there)
-        text = f"only {seen.sum()} of {vials} vials could be seen, and {needed} are needed; perhaps missing: {lost}"
+        lost = ", ".join(vial.label for vial, there in zip(case.plate.vials, seen[0], strict=True) if not there)
+        text = f"only {count} of {vials} vials could be seen, and {needed} are needed; perhaps missing: {lost}"
         return NotLocated("too-few-vials", text)
-    if margin < need:
-        return NotLocated("ambiguous", _why(found, case))
-    return _placement(case, found.take([0]), seen, shares[0], float(np.clip(margin / (2 * need), 0, 1)))
+    need = max(SURE, SURE_SHARE * float(totals[0]))
+    close = np.flatnonzero(totals > totals[0] - 2 * need)
+    settled = [_settle(case, found.take([k]), shares[k]) for k in close]
+    # The labelling that is in front has to beat every other, by score and by how well the centres fit together.
+    lead = [
+        (float(totals[0] - totals[k]) / need) + _fits_better(settled[0], other, case) / SURE_FIT
+        for k, other in zip(close[1:], settled[1:], strict=True)
+    ]
+    if lead and min(lead) < 1:
+        rival = int(close[1 + int(np.argmin(lead))])
+        if count < 0.75 * vials and float(totals[0]) < 1.0 * count:
+            return NotLocated("no-plate", f"nothing in the images is arranged like the plate '{case.plate.name}'")
+        return NotLocated("ambiguous", _why(found.take([0, rival]), case))
+    ahead = min([*lead, float(totals[0] - totals[len(close)]) / need if len(totals) > len(close) else 2.0])
+    return _placement(case, settled[0], seen[0], float(np.clip(ahead / 2, 0, 1)))
 
 
 def _why(found: Placements, case: _Case) -> str:
@@ -150,19 +164,44 @@ def _why(found: Placements, case: _Case) -> str:
     )
 
 
-def _placement(case: _Case, best: Placements, seen: Floats, shares: Floats, confidence: float) -> Placement:
-    """The chosen placement, made finer on the images' own voxels."""
-    target = best.at(case.design)[0]
-    weight = np.where(seen, shares / (1.05 - shares), 0.0)
+@dataclass(frozen=True, slots=True, eq=False)
+class _Settled:
+    """A placement made finer on the images' own voxels."""
+
+    best: Placements
+    found: Points  # (vials,) centres from the rims
+    used: Floats  # (vials,) weight; 0: not used
+
+
+def _settle(case: _Case, best: Placements, shares: Floats) -> _Settled:
+    weight = np.where(shares >= SEEN, shares / (1.05 - shares), 0.0)
+    found, used = best.at(case.design)[0], weight
     for _ in range(3):
-        found, ok = rim_centres(case.components, case.spacing_mm, target, case.radii)
-        use = weight * ok
-        if np.count_nonzero(use) < 3:
-            found, use = best.at(case.design)[0], weight
-        best = _robust(case.design, best, found, use)
-        target = best.at(case.design)[0]
-    at = best.at(case.design)[0]
-    apart = np.abs(found - at)[use > 0]
+        found, usable = rim_centres(case.components, case.spacing_mm, best.at(case.design)[0], case.radii)
+        used = weight * usable
+        if np.count_nonzero(used) < 3:
+            return _Settled(best, best.at(case.design)[0], weight)
+        best = _robust(case.design, best, found, used)
+    return _Settled(best, found, used)
+
+
+def _fits_better(one: _Settled, other: _Settled, case: _Case) -> float:
+    """Log-likelihood ratio of two placements from the distances of found and fitted centres (Gaussian, cut at 3 sigma).
+
+    Sigma is what the one leaves, but at least what plates are built to: 0.3 mm.
+    """
+    apart = [np.abs(each.found - each.best.at(case.design)[0]) for each in (one, other)]
+    both = (one.used > 0) & (other.used > 0)
+    if not both.any():
+        return 0.0
+    sigma = max(float(np.sqrt(np.median(apart[0][both] ** 2))), 0.3, 0.15 * max(case.spacing_mm))
+    cut = [np.minimum(each[both] / sigma, 3.0) ** 2 for each in apart]
+    return float(cut[1].sum() - cut[0].sum()) / 2
+
+
+def _placement(case: _Case, settled: _Settled, seen: NDArray[np.bool_], confidence: float) -> Placement:
+    best = settled.best
+    apart = np.abs(settled.found - best.at(case.design)[0])[settled.used > 0]
     origin = best.at(np.array([-case.middle]))[0, 0]
     labels = [vial.label for vial in case.plate.vials]
     return Placement(

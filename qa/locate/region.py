@@ -15,10 +15,11 @@ _CLEAR_MM = 0.3  # for what the placement and the plate's own making may be off
 _FEWEST = 5  # voxels, where the radius allows
 _STEPS = (1.5, 1.25, 1.0, 0.75, 0.5, 0.25, 0.0)
 _OFF_SHARE = 0.04  # departure of a voxel's amplitude from the smooth one that is let pass whatever the noise
+_MOST_SHARE = 0.3  # departure that is never let pass, however much the voxels differ, unless noise explains it
 _STRONG = 0.25  # departure from which a voxel's neighbours are left out too
 _STEEPEST_PER_MM = 0.02  # relative slope of receive shading within a vial
 _DRAWS = 120
-_TIMES = 5.0  # standard deviations that make an outlier
+_TIMES = 4.5  # standard deviations that make an outlier
 
 
 def regions(placement: Placement, plate: Plate, frames: Pixels, spacing_mm: tuple[float, float]) -> tuple[Region, ...]:
@@ -125,7 +126,7 @@ def outliers(
     away = amplitude - _plane(amplitude, offset_mm)
     rest = np.sqrt(np.mean((scaled - amplitude[None, :] * course[:, None]) ** 2, axis=0))
     share = _OFF_SHARE * (1 + 2 * (1 - min(clear / _CLEAR_VOXELS, 1)))
-    limit = max(_TIMES * max(_spread(away), power**-0.5), share)
+    limit = max(min(max(_TIMES * _spread(away), share), _MOST_SHARE), _TIMES * power**-0.5)
     bad = np.abs(away) > limit
     usual = float(np.median(rest))
     # In units of the whole course: a small misfit of a strong signal is no artefact, whatever the noise.
@@ -177,7 +178,10 @@ def _plane(values: Floats, offset_mm: Floats) -> Floats:
         if np.count_nonzero(weight) < 6:
             break
         root = np.sqrt(weight)
-        fitted = basis @ np.linalg.lstsq(basis * root[:, None], values * root, rcond=None)[0]
+        plane = np.linalg.lstsq(basis * root[:, None], values * root, rcond=None)[0]
+        if np.hypot(plane[1], plane[2]) > _STEEPEST_PER_MM:
+            break
+        fitted = basis @ plane
     return np.asarray(fitted)
 
 

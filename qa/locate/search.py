@@ -45,7 +45,7 @@ class Placements:
 
 def seen_from(plate: Points, flipped: NDArray[np.bool_]) -> Points:
     """Plate points, mirrored where flipped: (placements, vials)."""
-    return np.asarray(np.where(flipped[:, None], -np.conj(plate)[None, :], plate[None, :]))
+    return np.asarray(np.where(flipped[:, None], -np.conj(plate)[None, :], plate[None, :]), dtype=np.complex128)
 
 
 def join(*parts: Placements) -> Placements:
@@ -76,7 +76,7 @@ class Field:
 
     def points(self, rows: Floats, columns: Floats) -> Points:
         """The reverse of `pixels`."""
-        return (columns - self._origin[1]) * self._pixel[1] - 1j * (rows - self._origin[0]) * self._pixel[0]
+        return np.asarray((columns - self._origin[1]) * self._pixel[1] - 1j * (rows - self._origin[0]) * self._pixel[0])
 
     def nearest(self, table: NDArray[np.float32], points: Points) -> NDArray[np.float32]:
         """Values of `table` (sizes, rows, columns) at (..., vials) points, nearest pixel, zero outside."""
