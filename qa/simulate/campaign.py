@@ -10,6 +10,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
+from qa.errors import SiteError
 from qa.simulate.story import Ageing, Cast, Drift, Hole, Mishap, Missed, Outline, Software, Step, Story, Trait
 from qa.simulate.truth import (
     Bubble,
@@ -84,13 +85,14 @@ def plan(
     Sessions fall on the story's own rhythm, counted from the story's start, so that any part of a story
     is the same as in the whole.
     """
+    _check(story, appointments)
     outline = story.story
     first = start or outline.start
     last = first + timedelta(days=7 * (weeks or outline.weeks))
     number = outline.seed if seed is None else seed
     days: list[tuple[date, Appointment]] = []
     for appointment in appointments:
-        anchor = outline.start + timedelta(days=story.cast(appointment.scanner).weekday)
+        anchor = _anchor(story, appointment)
         step = -(-(first - anchor).days // appointment.every_days)
         day = anchor + timedelta(days=step * appointment.every_days)
         while day < last:
@@ -128,6 +130,36 @@ def session(story: Story, appointment: Appointment, day: date, zone: ZoneInfo, s
             truth = _mishap(truth, event, appointment.recipe)
     thermometer = round(celsius + float(rng.normal(0, outline.thermometer_k)), 1)
     return PlannedRun(appointment, truth, own, cast.form, thermometer)
+
+
+def _anchor(story: Story, appointment: Appointment) -> date:
+    return story.story.start + timedelta(days=story.cast(appointment.scanner).weekday)
+
+
+def _check(story: Story, appointments: tuple[Appointment, ...]) -> None:
+    """Every name in the story is known, and every mishap falls on a session; else SiteError."""
+    scanners = {appointment.scanner for appointment in appointments}
+    phantoms = {appointment.phantom: appointment.plate for appointment in appointments}
+    for index, event in enumerate(story.event, start=1):
+        where = f"story.toml, event {index} ({event.kind})"
+        if isinstance(event, Ageing | Hole):
+            if event.phantom not in phantoms:
+                known = ", ".join(sorted(phantoms))
+                raise SiteError(f"no schedule has the phantom '{event.phantom}'", where, f"Scheduled are: {known}.")
+            if event.vial not in {vial.label for vial in phantoms[event.phantom].vials}:
+                raise SiteError(f"the plate has no vial '{event.vial}'", where, "Use a label of the plate.")
+            continue
+        if event.scanner not in scanners:
+            known = ", ".join(sorted(scanners))
+            raise SiteError(f"no schedule has the scanner '{event.scanner}'", where, f"Scheduled are: {known}.")
+        own = [appointment for appointment in appointments if appointment.scanner == event.scanner]
+        if isinstance(event, Mishap):
+            gaps = [(event.on - _anchor(story, a)).days % a.every_days for a in own]
+            if all(gaps):
+                near = event.on - timedelta(days=min(gaps))
+                raise SiteError(f"no session is due on {event.on}", where, f"The one before is on {near}.")
+            if event.scan is not None and event.scan not in {scan.name for a in own for scan in a.recipe.scans}:
+                raise SiteError(f"the recipe has no scan '{event.scan}'", where, "Use a scan's name from the recipe.")
 
 
 def _missed(story: Story, scanner: str, day: date) -> bool:
