@@ -132,6 +132,8 @@ def upgrade() -> None:
         sa.Column("acquired", sa.DateTime(), nullable=False),
         sa.Column("field_t", sa.Double()),
         sa.Column("facts", sa.Text(), nullable=False),
+        sa.Column("files", sa.Integer(), nullable=False),
+        sa.Column("files_digest", sa.String(length=64), nullable=False),
         sa.Column("celsius", sa.Double()),
         sa.Column("u_celsius", sa.Double()),
         sa.Column("celsius_source", sa.Text(), nullable=False),

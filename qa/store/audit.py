@@ -14,7 +14,7 @@ from dataclasses import dataclass
 from datetime import timedelta
 from typing import TYPE_CHECKING, Any, Protocol
 
-from sqlalchemy import Connection, select
+from sqlalchemy import Connection, Select, select
 
 from qa.errors import ArchiveError
 from qa.store.covers import COVERS, Cover, digest_of
@@ -113,7 +113,7 @@ def _walk(
     promised: dict[str, dict[str, _Promise]] = {}
     seq, last, latest = 0, START, None
     anchored = anchor is None
-    for row in connection.execute(select(LedgerRow.__table__).order_by(LedgerRow.seq)).mappings():
+    for row in _streamed(connection, select(LedgerRow.__table__).order_by(LedgerRow.seq)):
         if row["seq"] % 1000 == 0:
             tell("ledger", row["seq"], head.entries)
         name = f"ledger entry {row['seq']}"
@@ -150,7 +150,7 @@ def _walk(
 def _compare(connection: Connection, cover: Cover, promised: dict[str, _Promise]) -> Iterator[Problem]:
     """The rows of one table against what the ledger promises."""
     groups: dict[str, list[str]] = {}
-    for row in connection.execute(select(cover.table.__table__)).mappings():
+    for row in _streamed(connection, select(cover.table.__table__)):
         if cover.present(row):
             groups.setdefault(cover.key_of(row), []).append(cover.text_of(row))
     name = cover.name.replace("_", " ")
@@ -205,6 +205,11 @@ def _read_covers(text: str) -> dict[str, dict[str, str]]:
     except ValueError:
         return {}  # the entry's hash has shown already that it was changed
     return covers if isinstance(covers, dict) else {}
+
+
+def _streamed(connection: Connection, query: Select[Any]) -> Iterator[Any]:
+    """Rows a few hundred at a time: pictures and curves of many years need not fit into memory."""
+    return iter(connection.execute(query, execution_options={"yield_per": 500}).mappings())
 
 
 def _head(connection: Connection) -> Head:

@@ -14,7 +14,7 @@ from enum import Enum
 from math import isfinite
 from typing import Any
 
-from sqlalchemy import DateTime, Dialect, Double, Text
+from sqlalchemy import Boolean, DateTime, Dialect, Double, Integer, LargeBinary, String, Text
 from sqlalchemy.types import TypeDecorator
 
 from qa.errors import StoreError
@@ -121,10 +121,16 @@ def stored_value(kind: object, value: Any) -> Any:
         return None
     if isinstance(value, Enum):
         value = value.value
-    if isinstance(kind, Words):
-        return clean(value)
+    if isinstance(kind, Words | String):
+        return clean(str(value))
     if isinstance(kind, Double):
         return number(value)
+    if isinstance(kind, Boolean):
+        return bool(value)
+    if isinstance(kind, Integer):
+        return int(value)
+    if isinstance(kind, LargeBinary):
+        return bytes(value)
     if isinstance(kind, Utc):
         return in_utc(value)
     if isinstance(kind, Json):

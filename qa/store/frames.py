@@ -11,7 +11,7 @@ from sqlalchemy import Connection, Select, Text, and_, func, select, tuple_, typ
 from qa.errors import StoreError
 from qa.reading import Curve, Measurement, Picture
 from qa.store.desk import Desk, as_instant
-from qa.store.models import EvidenceRow, FileRow, MeasurementRow, ReadingRow, RunRow
+from qa.store.models import EvidenceRow, MeasurementRow, ReadingRow, RunRow
 from qa.store.rows import to_evidence, to_measurement
 
 if TYPE_CHECKING:
@@ -39,7 +39,16 @@ _OF_RUN = (
     *(_M.verdict, _M.reasons, _M.limits_digest, _M.judged_at, _M.centre_x_mm, _M.centre_y_mm, _M.centre_z_mm),
     *(_M.centre_row, _M.centre_column, _M.rotation_deg, _M.flipped, _M.scale, _M.residual_mm, _M.confidence),
     *(_M.seen, _M.missing, _M.software, _M.coil, _M.field_t, _M.remarks, _M.shared, _M.run_void, _M.measured_at),
-    *(_M.vialbook_version, _M.reason, _M.method_fingerprint, _M.method_versions, _RUN.study_uid, _M.facts),
+    *(
+        _M.vialbook_version,
+        _M.files,
+        _M.files_digest,
+        _M.reason,
+        _M.method_fingerprint,
+        _M.method_versions,
+        _RUN.study_uid,
+        _M.facts,
+    ),
 )
 
 
@@ -49,6 +58,7 @@ class Frames(Desk):
     def readings(
         self,
         *,
+        run: str | None = None,
         scanner: str | None = None,
         phantom: str | None = None,
         as_of: datetime | date | None = None,
@@ -59,6 +69,7 @@ class Frames(Desk):
 
         Parameters
         ----------
+        run, scanner, phantom : only those
         as_of : the book as it was then: only what had been measured by that time (a date: by its end, UTC)
         since : only runs acquired at that time or later
         generation : "newest" of each run, "all", or that number where a run has it
@@ -75,7 +86,7 @@ class Frames(Desk):
 
         from qa.store.tidy import objects, series
 
-        chosen = _chosen(scanner, phantom, as_of, since, generation)
+        chosen = _chosen(run, scanner, phantom, as_of, since, generation)
         runs = chosen.with_only_columns(*_HEAD).order_by(_M.acquired, _M.run, _M.generation)
         of_measurement = and_(_R.run == _M.run, _R.generation == _M.generation)
         notes = type_coerce(_R.notes, Text)  # as text: most rows have the same few
@@ -100,6 +111,7 @@ class Frames(Desk):
     def runs(
         self,
         *,
+        run: str | None = None,
         scanner: str | None = None,
         phantom: str | None = None,
         as_of: datetime | date | None = None,
@@ -115,24 +127,13 @@ class Frames(Desk):
             the placement (centre_x_mm … confidence; NaN where the plate was not located), software, coil, field_t,
             remarks (list of dict), shared (dict), files (how many of the originals were used), measured_at,
             vialbook_version, and what else is recorded of a measurement. `run_void`: a void remark on the whole run.
+            Verdicts are those of now, also with `as_of`: the ledger tells how they came about.
         """
         from qa.store.tidy import frame
 
-        query = _chosen(scanner, phantom, as_of, since, generation).with_only_columns(*_OF_RUN)
-        _F = FileRow.__table__.c
-        count = select(_F.run, _F.generation, func.count()).where(_F.role == "used").group_by(_F.run, _F.generation)
+        query = _chosen(run, scanner, phantom, as_of, since, generation).with_only_columns(*_OF_RUN)
         with self._read() as connection:
-            result = frame(_OF_RUN, connection.execute(query.order_by(_M.acquired, _M.run, _M.generation)).all())
-            added = connection.execute(count).all()
-        files: dict[str, list[tuple[int, int]]] = {}
-        for run, since_generation, number in added:
-            files.setdefault(run, []).append((since_generation, number))
-        result["files"] = [
-            sum(number for first, number in files.get(run, []) if first <= upto)
-            for run, upto in zip(result["run"], result["generation"], strict=True)
-        ]
-        result["files"] = result["files"].astype("int64")
-        return result
+            return frame(_OF_RUN, connection.execute(query.order_by(_M.acquired, _M.run, _M.generation)).all())
 
     def measurement(self, run: str, generation: int | None = None) -> Measurement:
         """A measurement as it was recorded; the newest generation if none is named.
@@ -164,6 +165,7 @@ class Frames(Desk):
 
 
 def _chosen(
+    run: str | None,
     scanner: str | None,
     phantom: str | None,
     as_of: datetime | date | None,
@@ -172,6 +174,8 @@ def _chosen(
 ) -> Select[Any]:
     """Measurements joined with their runs, narrowed down."""
     query = select(_M.run).join(RunRow.__table__, _RUN.run == _M.run)
+    if run is not None:
+        query = query.where(_M.run == run)
     if scanner is not None:
         query = query.where(_RUN.scanner == scanner)
     if phantom is not None:

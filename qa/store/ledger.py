@@ -15,6 +15,7 @@ from typing import Any, NamedTuple
 
 from sqlalchemy import Connection, insert, select, update
 
+from qa.errors import StoreError
 from qa.store.columns import canonical, clean, in_utc
 from qa.store.covers import Covers
 from qa.store.records import LedgerHeadRow, LedgerRow
@@ -63,8 +64,11 @@ def entry_hash(seq: int, at: datetime, kind: str, subject: str, payload: str, co
 def lock_head(connection: Connection) -> Head:
     """The ledger's end, locked for this transaction: writers queue here (on SQLite they have queued already)."""
     columns = select(LedgerHeadRow.entries, LedgerHeadRow.hash).where(LedgerHeadRow.id == 1)
-    entries, last = connection.execute(columns.with_for_update()).one()
-    return Head(int(entries), str(last))
+    row = connection.execute(columns.with_for_update()).first()
+    if row is None:
+        remedy = "Somebody took it out. Nothing more is written; see what vialbook audit says, and restore a copy."
+        raise StoreError("the ledger has lost its end", remedy=remedy)
+    return Head(int(row[0]), str(row[1]))
 
 
 def append(

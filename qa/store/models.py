@@ -94,6 +94,8 @@ class MeasurementRow(Base):
     acquired: Mapped[datetime] = mapped_column(index=True)
     field_t: Mapped[float | None]
     facts: Mapped[dict[str, Any]]
+    files: Mapped[int]  # how many of the originals were used
+    files_digest: Mapped[str] = mapped_column(String(64))  # over their hashes
     celsius: Mapped[float | None]
     u_celsius: Mapped[float | None]
     celsius_source: Mapped[str]

@@ -92,8 +92,9 @@ class Recording(Desk):
         """
         with self._write() as connection:
             newest = _newest(connection, session.run)
-            known = set(connection.execute(select(FileRow.sha256).where(FileRow.run == session.run)).scalars())
-            if newest and only_new_files and known.issuperset(file.sha256 for file in session.files):
+            roles = select(FileRow.sha256, FileRow.role).where(FileRow.run == session.run)
+            known: dict[str, str] = dict(connection.execute(roles).tuples().all())
+            if newest and only_new_files and all(file.sha256 in known for file in session.files):
                 return newest
             generation = newest + 1
             covers = Covers()
@@ -101,7 +102,11 @@ class Recording(Desk):
                 covers.add("run", add_rows(connection, RunRow, [self._run_row(session)]))
             files = _file_rows(session, duplicates, known, generation)
             covers.add("file", add_rows(connection, FileRow, files))
+            used = [sha for sha, role in known.items() if role == "used"]
+            used += [file["sha256"] for file in files if file["role"] == "used"]
             row = measurement_row(session, measurement) | {
+                "files": len(used),
+                "files_digest": files_digest(used),
                 "generation": generation,
                 "measured_at": self.now(),
                 "reason": reason,
@@ -116,10 +121,7 @@ class Recording(Desk):
             readings = add_rows(connection, ReadingRow, [one | of_run for one in reading_rows(measurement.readings)])
             evidence = [one | of_run for one in evidence_rows(measurement.curves, measurement.pictures)]
             covers.add("reading", readings).add("evidence", add_rows(connection, EvidenceRow, evidence))
-            payload = _payload(session, kept[0], readings) | {
-                "files": files_digest(known | {file.sha256 for file in session.files})
-            }
-            self._witness(connection, "measured", session.run, payload, covers)
+            self._witness(connection, "measured", session.run, _payload(session, kept[0], readings), covers)
         return generation
 
     def set_verdict(
@@ -182,7 +184,7 @@ def _newest(connection: Connection, run: str) -> int:
 
 
 def _file_rows(
-    session: Session, duplicates: Sequence[FileRecord], known: set[str], generation: int
+    session: Session, duplicates: Sequence[FileRecord], known: Container[str], generation: int
 ) -> list[dict[str, Any]]:
     """Rows for the files that the run does not have yet; of equal contents one is enough."""
     rows: dict[str, dict[str, Any]] = {}
@@ -204,10 +206,12 @@ def _file_rows(
 
 def _payload(session: Session, row: Row, readings: Sequence[Row]) -> dict[str, Any]:
     """What an auditor reads of a measurement: who, when, how, and every value as it then was."""
-    told = ("generation", "reason", "method_fingerprint", "method_versions", "vialbook_version", "acquired", "celsius")
+    told = (
+        *("generation", "reason", "method_fingerprint", "method_versions", "vialbook_version"),
+        *("acquired", "celsius", "files", "files_digest", "verdict"),
+    )
     return {name: row[name] for name in told} | {
         "scanner": session.scanner,
         "phantom": session.phantom,
-        "verdict": row["verdict"],
         "readings": [[r["scan"], r["vial"], r["state"], r["value_ms"], r["u_ms"]] for r in readings],
     }

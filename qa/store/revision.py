@@ -26,6 +26,10 @@ def check_revision(stored: str, where: str) -> None:
         return
     if is_older(stored):
         what = f"this book was made by an older version of Vialbook (revision {stored}, now {HEAD})"
-        raise OldBookError(what, where, "Run: vialbook migrate (it copies the database first).")
+        if "://" in where:  # a server: Vialbook cannot copy what it does not own
+            remedy = "Make a dump first (pg_dump: on a server that is its operator's duty), then run: vialbook migrate."
+        else:
+            remedy = "Run: vialbook migrate (it copies the database first)."
+        raise OldBookError(what, where, remedy)
     what = f"this book was made by a newer version of Vialbook (revision {stored}, here {HEAD})"
     raise OldBookError(what, where, "Use that version or a later one; nothing was changed.")
