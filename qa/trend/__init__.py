@@ -1,7 +1,7 @@
 """Trend room: watches streams for drift.
 
 Enters: tidy frames of readings, runs and log entries (pandas), the limit blocks of the site.
-Leaves: judgements of runs (`judge`), findings and levels (`find`), series to plot (`series`), and log entries for
+Leaves: judgements of runs (`judge`), findings and levels (`find`), and log entries for
 software and coil changes that the data themselves show (`log_entries_from_runs`).
 Knows nothing of the database, HTML or DICOM; holds no state and reads no clock.
 
@@ -17,6 +17,14 @@ _HOMES = {
     "Judgement": "judging",
     "StreamRow": "judging",
     "judge": "judging",
+    "Finding": "findings",
+    "Forecast": "findings",
+    "NearEntry": "findings",
+    "Trend": "finding",
+    "find": "finding",
+    "StreamSummary": "summary",
+    "ReadEntry": "logbook",
+    "log_entries_from_runs": "logbook",
     "Promise": "budget",
 }
 __all__ = sorted(_HOMES)

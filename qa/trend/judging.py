@@ -18,7 +18,7 @@ from qa.site.limits import LimitBlock, in_force
 from qa.trend.baseline import Segment, segments
 from qa.trend.budget import Promise, Shares, Smoothed, beyond_chance, shares, smooth
 from qa.trend.levels import Lane, lanes
-from qa.trend.sentences import capital, percent, plain, quantity_name, vials
+from qa.trend.sentences import percent, plain, quantity_name, vials
 from qa.trend.streams import Block, Bools, blocks, restarts, stamps
 from qa.words import Consequence, Floats, Quantity, Verdict, worst
 

@@ -1,0 +1,266 @@
+"""Has a series changed, when, by a step or a slope, and by how much.
+
+All candidates for the onset are tried at once by least squares with one intercept per group (a group is a stretch
+with a baseline of its own, so scanners and restarts can be pooled). The scale of the scatter is estimated from the
+series itself; only relative uncertainties are taken from the caller.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import Literal
+
+import numpy as np
+from scipy.special import stdtrit
+
+from qa.trend.streams import Bools, Ints
+from qa.words import Floats
+
+Kind = Literal["step", "slope"]
+YEAR = 365.25
+FEWEST_AFTER_STEP = 3
+FEWEST_AFTER_SLOPE = 5
+FEWEST_BEFORE = 3
+_MOST_CANDIDATES = 400
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Change:
+    """One change. Times in days (the unit of the series' times), sizes in percent, u are standard uncertainties."""
+
+    kind: Kind
+    onset: float  # step: time of the first run after it; slope: where the line leaves the level
+    earliest: float  # with `latest` the 90 % set; a step happened after `earliest` and not after `latest`
+    latest: float
+    size: float  # step: its height; slope: the change from the onset to the last run
+    u_size: float
+    rate: float  # percent per year; NaN for a step
+    u_rate: float
+    freedom: float
+    chance: float  # probability that an unchanged series shows as much anywhere
+    favour: float  # log likelihood of this kind over the other kind
+    contribution: Floats  # (n,) what it adds to each value
+
+    def interval(self, level: float = 0.90) -> tuple[float, float]:
+        """Interval of the size, given the onset."""
+        reach = float(stdtrit(self.freedom, 0.5 + level / 2.0)) * self.u_size
+        return self.size - reach, self.size + reach
+
+
+def wild(values: Floats, sd: Floats, width: float = 4.0) -> Bools:
+    """Values far from the running median of five: single bad runs, not shifts. (n,) -> (n,)."""
+    here = np.flatnonzero(np.isfinite(values))
+    flags = np.zeros(values.shape, dtype=bool)
+    if here.size < 5:
+        return flags
+    x = values[here]
+    starts = np.clip(np.arange(x.size) - 2, 0, x.size - 5)
+    middle = np.median(x[starts[:, None] + np.arange(5)], axis=1)
+    distance = x - middle
+    scale = max(1.4826 * float(np.median(np.abs(distance))) * 1.15, 1e-9)
+    flags[here] = np.abs(distance) > width * np.maximum(scale, 0.7 * sd[here])
+    return flags
+
+
+def _regressor(kind: Kind, t: Floats, onset: Floats) -> Floats:
+    """(n, m): what each candidate onset adds per unit of size (step) or per percent a year (slope)."""
+    if kind == "step":
+        return (t[:, None] >= onset).astype(np.float64)
+    return np.clip(t[:, None] - onset, 0.0, None) / YEAR
+
+
+def _centred(x: Floats, weight: Floats, group: Ints) -> Floats:
+    """Takes the weighted mean of each group out of every column."""
+    out = np.empty_like(x)
+    for number in np.unique(group):
+        here = group == number
+        out[here] = x[here] - (weight[here] @ x[here]) / weight[here].sum()
+    return out
+
+
+def peak_chance(z: float, count: int, edge: int) -> float:
+    """Probability that the largest of the standardised candidates of an unchanged series exceeds `z` (two-sided).
+
+    References
+    ----------
+    Miller and Siegmund (1982), Biometrics 38(4), 1011-1016 (maximally selected chi square).
+    """
+    if z < 1.2 or count <= 2 * edge:
+        return 1.0
+    low = edge / count
+    span = 2.0 * np.log((1.0 - low) / low)
+    density = np.exp(-0.5 * z * z) / np.sqrt(2.0 * np.pi)
+    return float(min(1.0, density * ((z - 1.0 / z) * span + 4.0 / z)))
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class _Search:
+    kind: Kind
+    onset: Floats
+    gain: Floats
+    weight: Floats  # of each candidate: the x'Wx
+    size: Floats
+
+
+def _search(kind: Kind, t: Floats, y: Floats, weight: Floats, group: Ints) -> _Search | None:
+    times = np.unique(t)
+    after = FEWEST_AFTER_STEP if kind == "step" else FEWEST_AFTER_SLOPE
+    onset = times[FEWEST_BEFORE:] if kind == "step" else times
+    onset = onset[onset <= times[-after]] if times.size >= after else onset[:0]
+    if onset.size > _MOST_CANDIDATES:
+        onset = onset[np.linspace(0, onset.size - 1, _MOST_CANDIDATES).astype(int)]
+    if not onset.size:
+        return None
+    x = _centred(_regressor(kind, t, onset), weight, group)
+    power = weight @ (x * x)
+    usable = power > 1e-12
+    if not usable.any():
+        return None
+    onset, x, power = onset[usable], x[:, usable], power[usable]
+    along = (weight * y) @ x
+    return _Search(kind, onset, along**2 / power, power, along / power)
+
+
+def find_change(t: Floats, y: Floats, sd: Floats, group: Ints | None = None) -> Change | None:
+    """The best single change of a series, however weak; its `chance` says whether to believe it.
+
+    Parameters
+    ----------
+    t : (n,) float64, days, in any order
+    y : (n,) float64, percent, finite
+    sd : (n,) float64, relative standard uncertainties
+    group : (n,) integers; each group has its own level before the change
+
+    Returns
+    -------
+    None where there are too few runs (fewer than 7).
+    """
+    group = np.zeros(t.size, dtype=np.intp) if group is None else group
+    weight = 1.0 / np.asarray(sd, dtype=np.float64) ** 2
+    groups = np.unique(group).size
+    freedom = float(t.size - groups - 2)
+    if t.size < 7 or freedom < 3:
+        return None
+    y0 = _centred(y[:, None], weight, group)[:, 0]
+    rss0 = float(weight @ (y0 * y0))
+    found = [
+        s for s in (_search("step", t, y0, weight, group), _search("slope", t, y0, weight, group)) if s is not None
+    ]
+    if not found or rss0 <= 0:
+        return None
+    best = max(found, key=lambda s: float(s.gain.max()))
+    other = [s for s in found if s is not best]
+    k = int(best.gain.argmax())
+    rss = max(rss0 - float(best.gain[k]), 1e-12 * rss0)
+    scale = rss / freedom
+
+    x = _regressor(best.kind, t, best.onset[[k]])
+    fitted = _centred(x, weight, group)[:, 0] * best.size[k]
+    inflation = _inflation(t, (y0 - fitted) * np.sqrt(weight), group)
+    z = float(np.sqrt(freedom * np.log1p(best.gain[k] / scale / inflation / freedom)))
+    chance = peak_chance(z, np.unique(t).size, FEWEST_BEFORE)
+
+    power = (freedom + 1.0) / (2.0 * inflation)
+    log_likelihood = -power * np.log(np.maximum(rss0 - best.gain, 1e-12 * rss0))
+    favour = float("inf")
+    if other:
+        favour = float(log_likelihood[k] + power * np.log(max(rss0 - float(other[0].gain.max()), 1e-12 * rss0)))
+    earliest, latest = _onset_set(best, log_likelihood, t)
+    u = float(np.sqrt(scale * inflation / best.weight[k]))
+    span = 1.0 if best.kind == "step" else float(t.max() - best.onset[k]) / YEAR
+    size = float(best.size[k])
+    return Change(
+        best.kind,
+        float(best.onset[k]),
+        earliest,
+        latest,
+        size * span,
+        u * span,
+        size if best.kind == "slope" else float("nan"),
+        u if best.kind == "slope" else float("nan"),
+        freedom,
+        chance,
+        favour,
+        x[:, 0] * size,
+    )
+
+
+def _inflation(t: Floats, white: Floats, group: Ints) -> float:
+    """How much autocorrelation widens variances: (1 + rho) / (1 - rho), where rho is plainly above zero."""
+    products, squares = 0.0, float(white @ white)
+    for number in np.unique(group):
+        ordered = white[group == number][np.argsort(t[group == number], kind="stable")]
+        products += float(ordered[1:] @ ordered[:-1])
+    rho = products / squares if squares > 0 else 0.0
+    rho = min(rho, 0.8) if rho > 1.65 / np.sqrt(white.size) else 0.0
+    return (1.0 + rho) / (1.0 - rho)
+
+
+def _onset_set(search: _Search, log_likelihood: Floats, t: Floats) -> tuple[float, float]:
+    """The smallest set of onsets that holds 90 % of the likelihood, spread evenly in time before looking."""
+    times = np.unique(t)
+    place = np.searchsorted(times, search.onset)
+    gap = times[place] - times[np.maximum(place - 1, 0)]
+    gap = np.where(gap > 0, gap, np.median(np.diff(times)))
+    log_density = log_likelihood - 0.5 * np.log(search.weight)
+    mass = gap * np.exp(log_density - log_density.max())
+    mass /= mass.sum()
+    order = np.argsort(-mass / gap, kind="stable")
+    kept = order[: int(np.searchsorted(np.cumsum(mass[order]), 0.90)) + 1]
+    first, last = search.onset[kept].min(), search.onset[kept].max()
+    if search.kind == "step":  # it happened after the run before the first candidate
+        before = np.searchsorted(times, first) - 1
+        first = times[max(before, 0)]
+    return float(first), float(last)
+
+
+def measure(
+    kind: Kind, onset: float, t: Floats, y: Floats, sd: Floats, group: Ints | None = None
+) -> tuple[float, float]:
+    """The height (step, percent) or rate (slope, percent per year) of a change of known onset, and its uncertainty.
+
+    NaN where the series cannot tell (no run before or after).
+    """
+    group = np.zeros(t.size, dtype=np.intp) if group is None else group
+    if t.size < 4:
+        return float("nan"), float("nan")
+    weight = 1.0 / sd**2
+    x = _centred(_regressor(kind, t, np.array([onset])), weight, group)[:, 0]
+    y0 = _centred(y[:, None], weight, group)[:, 0]
+    power = float(weight @ (x * x))
+    if power <= 1e-9:
+        return float("nan"), float("nan")
+    size = float((weight * x) @ y0) / power
+    rest = y0 - size * x
+    scale = max(float(weight @ (rest * rest)) / max(t.size - np.unique(group).size - 1, 1), 0.25)
+    return size, float(np.sqrt(scale / power))
+
+
+def find_changes(
+    t: Floats, y: Floats, sd: Floats, group: Ints | None = None, *, alpha: float, most: int = 3
+) -> tuple[Change, ...]:
+    """Changes one after another, each believed only if chance gives it with less than `alpha`; in order of onset.
+
+    After each new one, all are fitted again with the others taken out.
+    """
+    found: list[Change] = []
+    rest = y
+    while len(found) < most:
+        change = find_change(t, rest, sd, group)
+        if change is None or change.chance > alpha:
+            break
+        found.append(change)
+        if len(found) > 1:
+            found = _refined(found, t, y, sd, group, alpha)
+        rest = y - np.sum([c.contribution for c in found], axis=0)
+    return tuple(sorted(found, key=lambda c: c.onset))
+
+
+def _refined(found: list[Change], t: Floats, y: Floats, sd: Floats, group: Ints | None, alpha: float) -> list[Change]:
+    for _ in range(2):
+        for place in range(len(found)):
+            others = [c.contribution for number, c in enumerate(found) if number != place]
+            again = find_change(t, y - np.sum(others, axis=0), sd, group)
+            if again is not None and again.chance <= alpha:
+                found[place] = again
+    return found
