@@ -28,7 +28,7 @@ from qa.words import Floats, Pixels
 SEEN = 0.25  # explained share of the variance from which a vial counts as seen
 MISSING_ALLOWED = 2
 MISSING_SHARE = 0.25  # … of many vials, more
-SURE = 2.0  # score by which the best labelling has to beat every other
+SURE = 2.4  # score by which the best labelling has to beat every other
 SURE_FIT = 12.0  # log-likelihood by which its centres have to fit better where the score does not tell
 SURE_SHARE = 0.06  # … and as a share of its own score
 _SMALLEST = 24  # voxels, shorter side
@@ -139,7 +139,7 @@ def _decide(case: _Case, found: Placements, totals: Floats, shares: Floats) -> P
     ]
     if lead and min(lead) < 1:
         rival = int(close[1 + int(np.argmin(lead))])
-        if count < 0.75 * vials and float(totals[0]) < 1.0 * count:
+        if count < 0.75 * vials and float(totals[0]) < 1.8 * count:
             return NotLocated("no-plate", f"nothing in the images is arranged like the plate '{case.plate.name}'")
         return NotLocated("ambiguous", _why(found.take([0, rival]), case))
     ahead = min([*lead, float(totals[0] - totals[len(close)]) / need if len(totals) > len(close) else 2.0])

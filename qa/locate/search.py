@@ -21,6 +21,8 @@ Points = NDArray[np.complex128]
 
 SCALE_TOLERANCE = 0.035
 _SOFT = 0.05  # unexplained share that counts as perfect
+_NOTHING, _SOMETHING = 0.12, 0.32  # shares: empty places hardly ever exceed the one, vials hardly ever fall below
+_THERE = 0.8  # score for being there at all, besides the log-likelihood of the fit
 _PAIRS = 48
 _HYPOTHESES = 40_000
 _SHORTLIST = 400
@@ -63,7 +65,8 @@ class Field:
     def __init__(self, evidence: Evidence) -> None:
         self.evidence = evidence
         self.size_of = np.array(evidence.size_of)
-        self.score = np.log(1 + _SOFT) - np.log(1 + _SOFT - evidence.maps)
+        there = np.clip((evidence.maps - _NOTHING) / (_SOMETHING - _NOTHING), 0, 1)
+        self.score = np.log(1 + _SOFT) - np.log(1 + _SOFT - evidence.maps) + np.float32(_THERE) * there
         working = evidence.working
         self._origin = np.array([working.pad[0] * working.step[0], working.pad[1] * working.step[1]])
         self._pixel = working.pixel_mm
