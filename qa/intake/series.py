@@ -6,12 +6,16 @@ from collections.abc import Mapping
 from dataclasses import dataclass
 from datetime import datetime
 from pathlib import Path
-from typing import Literal
+from typing import TYPE_CHECKING, Literal
 
 import numpy as np
 
 from qa.site.recipe import Scan
 from qa.words import Floats, Pixels, Remark
+
+if TYPE_CHECKING:
+    from qa.intake.header import FileHeader
+    from qa.intake.reader import DatasetCache
 
 
 @dataclass(frozen=True, slots=True)
@@ -83,7 +87,7 @@ class FileRecord:
 class Session:
     """One phantom session on one scanner: the stuff of which a run is made. Pixels are not loaded yet.
 
-    `qa.intake.assemble.load(session)` gives its series.
+    `qa.intake.load(session, recipe)` gives its series.
     """
 
     run: str  # 12 hex digits of SHA-256 over study UID, scanner and phantom: the same at every intake
@@ -96,6 +100,8 @@ class Session:
     facts: Mapping[str, str]
     remarks: tuple[Remark, ...] = ()
     archive: Path | None = None  # where the originals lie, by hash
+    headers: tuple[FileHeader, ...] = ()  # in the order of `files`
+    cache: DatasetCache | None = None  # files parsed already
 
 
 Component = Literal["magnitude", "real", "imaginary", "phase"]
