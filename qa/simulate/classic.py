@@ -7,7 +7,20 @@ from pathlib import Path
 
 from pydicom.uid import MRImageStorage
 
-from qa.simulate.header import COUNTS, ScanData, corner, describe, pixels, put, save, start, stored, uid
+from qa.simulate.header import (
+    ScanData,
+    corner,
+    describe,
+    leave_out,
+    pixels,
+    put,
+    put_private_slope,
+    save,
+    start,
+    step_of,
+    stored,
+    uid,
+)
 from qa.simulate.truth import RunTruth
 
 
@@ -18,18 +31,19 @@ def write(folder: Path, truth: RunTruth, data: ScanData, study: str, *, series_p
     for index, frame in enumerate(data.frames):
         ti, te = data.ti_ms[index], data.te_ms[index]
         time = f"TI{ti:g}" if ti is not None else f"TE{te:g}"
-        series = 100 * data.number + (index + 1 if separate else 0)
+        series = 100 * data.number + (index + 1 if separate else 0) + (50 if data.part == "imaginary" else 0)
         instance = 1 if separate else index + 1
-        path = folder / f"{data.number:02d}" / f"{time}.dcm"
+        kind = "" if data.part in ("magnitude", "real") and truth.written != "real-imaginary" else f"-{data.part}"
+        path = folder / f"{data.number:02d}{kind}" / f"{time}.dcm"
         identity = (*data.identity, data.number, index)
-        ds = start(path, MRImageStorage, uid(*identity, "image"), truth, uid(study))
+        ds = start(path, MRImageStorage, uid(*identity, data.part, "image"), truth, uid(study))
         ds.StudyInstanceUID = study
         put(ds, describe(data, time if separate else ""))
         moment = truth.acquired + timedelta(minutes=4 * data.number, seconds=2 * index if separate else 0)
         ds.AcquisitionDate, ds.AcquisitionTime = moment.strftime("%Y%m%d"), moment.strftime("%H%M%S")
         spacing = truth.field_of_view_mm / truth.matrix
-        ds.ImageType = ["ORIGINAL", "PRIMARY", "R" if truth.signed else "OTHER"]
-        ds.SeriesInstanceUID = uid(*data.identity, data.number, series, "series")
+        ds.ImageType = ["ORIGINAL", "PRIMARY", {"magnitude": "OTHER", "real": "R", "imaginary": "I"}[data.part]]
+        ds.SeriesInstanceUID = uid(*data.identity, data.number, series, data.part, "series")
         ds.SeriesNumber, ds.InstanceNumber = series, instance
         ds.AcquisitionNumber = 1
         ds.BodyPartExamined = "HEAD"
@@ -50,11 +64,13 @@ def write(folder: Path, truth: RunTruth, data: ScanData, study: str, *, series_p
         ds.ImagePositionPatient = corner(truth)
         ds.ImageOrientationPatient = [1, 0, 0, 0, 1, 0]
         ds.PixelSpacing = [round(spacing, 6)] * 2
-        step = 1.0
-        if truth.scanner.scaling == "slope-per-frame":  # each frame stretched to its own maximum
-            step = max(float(abs(frame).max()) * COUNTS / 30000.0, 1e-6)
+        step = step_of(frame, truth)
+        if truth.scanner.scaling == "slope-per-frame":
             ds.RescaleIntercept, ds.RescaleSlope, ds.RescaleType = 0, f"{step:.8g}", "US"
-            step = float(ds.RescaleSlope)
+        elif truth.scanner.scaling == "private-slope":
+            ds.RescaleIntercept, ds.RescaleSlope, ds.RescaleType = 0, f"{1.0 + 0.1 * (index % 7):g}", "US"
+            put_private_slope(ds, truth, step)
         pixels(ds, data.frames.shape[1:], truth, stored(frame, truth, step).tobytes())
+        leave_out(ds, truth)
         paths.append(save(ds, path))
     return paths

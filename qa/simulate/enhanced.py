@@ -9,7 +9,7 @@ from pydicom.dataset import Dataset
 from pydicom.sequence import Sequence
 from pydicom.uid import EnhancedMRImageStorage
 
-from qa.simulate.header import COUNTS, ScanData, corner, describe, pixels, put, save, start, stored, uid
+from qa.simulate.header import ScanData, corner, describe, leave_out, pixels, put, save, start, step_of, stored, uid
 from qa.simulate.truth import RunTruth
 
 _PROTON_MHZ_PER_T = 42.577478518  # CODATA 2018, shielded value differs by 26 ppm
@@ -28,28 +28,27 @@ def _code(value: str, scheme: str, meaning: str) -> Sequence:
 
 def write(folder: Path, truth: RunTruth, data: ScanData, study: str) -> list[Path]:
     """Write one scan as one file."""
-    path = folder / f"{data.number:02d}.dcm"
-    identity = (*data.identity, data.number)
+    kind = f"-{data.part}" if truth.written == "real-imaginary" else ""
+    path = folder / f"{data.number:02d}{kind}.dcm"
+    identity = (*data.identity, data.number, data.part)
     ds = start(path, EnhancedMRImageStorage, uid(*identity, "image"), truth, uid(study))
     ds.StudyInstanceUID = study
     put(ds, describe(data, ""))
     ds.SeriesInstanceUID = uid(*identity, "series")
-    ds.SeriesNumber, ds.InstanceNumber = 100 * data.number, 1
+    ds.SeriesNumber, ds.InstanceNumber = 100 * data.number + (50 if data.part == "imaginary" else 0), 1
     moment = truth.acquired + timedelta(minutes=4 * data.number)
     ds.AcquisitionDateTime = moment.strftime("%Y%m%d%H%M%S.000000%z")
     ds.AcquisitionDuration = 240.0
     ds.AcquisitionNumber = 1
     inverted = any(ti is not None for ti in data.ti_ms) and data.scan.method == "inversion-recovery"
     contrast = "T1" if data.scan.quantity == "T1" else "T2"
-    component = "REAL" if truth.signed else "MAGNITUDE"
+    component = data.part.upper()
     ds.ImageType = ["ORIGINAL", "PRIMARY", contrast, "NONE"]
     _sequence(ds, truth, data, contrast, component)
     count, rows, columns = data.frames.shape
-    steps = [1.0] * count
-    if truth.scanner.scaling == "slope-per-frame":
-        steps = [max(float(abs(frame).max()) * COUNTS / 30000.0, 1e-6) for frame in data.frames]
+    steps = [step_of(frame, truth) for frame in data.frames]
     ds.NumberOfFrames = count
-    ds.SharedFunctionalGroupsSequence = Sequence([_shared(truth, data, contrast, component, steps)])
+    ds.SharedFunctionalGroupsSequence = Sequence([_shared(truth, data, contrast, component)])
     ds.PerFrameFunctionalGroupsSequence = Sequence(
         [_frame(truth, data, index, inverted, steps[index]) for index in range(count)]
     )
@@ -61,6 +60,7 @@ def write(folder: Path, truth: RunTruth, data: ScanData, study: str) -> list[Pat
     ds.AcquisitionContextSequence = Sequence([])
     pieces = [stored(frame, truth, step).tobytes() for frame, step in zip(data.frames, steps, strict=True)]
     pixels(ds, (rows, columns), truth, b"".join(pieces))
+    leave_out(ds, truth)
     return [save(ds, path)]
 
 
@@ -95,14 +95,14 @@ def _sequence(ds: Dataset, truth: RunTruth, data: ScanData, contrast: str, compo
     ds.LossyImageCompression = "00"
 
 
-def _shared(truth: RunTruth, data: ScanData, contrast: str, component: str, steps: list[float]) -> Dataset:
+def _shared(truth: RunTruth, data: ScanData, contrast: str, component: str) -> Dataset:
     shared = Dataset()
     spacing = round(truth.field_of_view_mm / truth.matrix, 6)
     frequency = truth.scanner.field_t * _PROTON_MHZ_PER_T
     shared.PixelMeasuresSequence = _item(PixelSpacing=[spacing, spacing], SliceThickness=truth.slice_mm)
     shared.PlaneOrientationSequence = _item(ImageOrientationPatient=[1, 0, 0, 0, 1, 0])
     shared.FrameAnatomySequence = _item(FrameLaterality="U", AnatomicRegionSequence=_code("69536005", "SCT", "Head"))
-    if len(set(steps)) == 1:
+    if truth.scanner.scaling == "counts":
         shared.PixelValueTransformationSequence = _item(RescaleIntercept=0, RescaleSlope=1, RescaleType="US")
     timing = Dataset()
     timing.RepetitionTime = data.tr_ms
@@ -180,6 +180,6 @@ def _frame(truth: RunTruth, data: ScanData, index: int, inverted: bool, step: fl
     modifier.PartialFourier = "NO"
     modifier.ParallelAcquisition = "NO"
     frame.MRModifierSequence = Sequence([modifier])
-    if truth.scanner.scaling == "slope-per-frame":
+    if truth.scanner.scaling != "counts":
         frame.PixelValueTransformationSequence = _item(RescaleIntercept=0, RescaleSlope=f"{step:.8g}", RescaleType="US")
     return frame

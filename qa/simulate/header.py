@@ -13,6 +13,7 @@ from pydicom.dataset import Dataset, FileDataset, FileMetaDataset
 from pydicom.uid import UID, ExplicitVRLittleEndian
 
 from qa.errors import SiteError
+from qa.simulate.scene import Part
 from qa.simulate.truth import RunTruth
 from qa.simulate.wording import accepted
 from qa.site.recipe import Scan
@@ -38,7 +39,38 @@ class ScanData:
     ti_ms: tuple[float | None, ...]  # per frame
     te_ms: tuple[float, ...]
     tr_ms: float
-    identity: tuple[object, ...]  # what makes this run's UIDs its own
+    identity: tuple[object, ...]  # what makes these files' UIDs their own
+    part: Part = "magnitude"
+
+
+def step_of(frame: Floats, truth: RunTruth) -> float:
+    """The rescale slope of a frame; per frame, each is stretched to its own maximum, as some scanners do."""
+    if truth.scanner.scaling == "counts":
+        return 1.0
+    return float(f"{max(float(np.abs(frame).max()) * COUNTS / 30000.0, 1e-6):.8g}")
+
+
+def put_private_slope(ds: Dataset, truth: RunTruth, step: float) -> None:
+    """Write the intensity scale as one vendor does: true = stored / private slope, whatever RescaleSlope says.
+
+    References
+    ----------
+    .. [1] Chenevert et al. (2014), Transl. Oncol. 7, 65-71.
+    """
+    block = ds.private_block(0x2005, truth.scanner.private_creator, create=True)
+    block.add_new(0x0D, "FL", 0.0)
+    block.add_new(0x0E, "FL", 1.0 / step)
+
+
+def leave_out(ds: Dataset, truth: RunTruth) -> None:
+    """Drop the attributes that the truth says are lacking, wherever they are in the file."""
+    for keyword in truth.left_out:
+        if keyword in ds:
+            delattr(ds, keyword)
+        for element in ds:
+            if element.VR == "SQ":
+                for item in element.value:
+                    leave_out(item, truth)
 
 
 def stored(frame: Floats, truth: RunTruth, step: float = 1.0) -> Floats:

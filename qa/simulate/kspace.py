@@ -3,14 +3,34 @@
 from __future__ import annotations
 
 import numpy as np
+from numpy.typing import NDArray
 
 from qa.words import Floats
 
 
-def window(matrix: int, filtering: float) -> Floats:
-    """Weight per k-space row, (matrix,), index 0 at the most negative frequency; `filtering` 0.46 is Hamming's."""
+def window(matrix: int, filtering: float, sampled: int | None = None) -> Floats:
+    """Weight per k-space line, (matrix,), index 0 at the most negative frequency.
+
+    `filtering` 0.46 is Hamming's window over the `sampled` middle lines; lines not sampled have weight 0.
+    """
     k = np.arange(matrix) - matrix // 2
-    return np.asarray(1 - filtering + filtering * np.cos(2 * np.pi * k / matrix))
+    lines = sampled or matrix
+    inside = (k >= -(lines // 2)) & (k < lines - lines // 2)
+    return np.where(inside, 1 - filtering + filtering * np.cos(2 * np.pi * k / lines), 0.0)
+
+
+def noise(
+    shape: tuple[int, int, int], sigma: float, weight: Floats, rng: np.random.Generator
+) -> NDArray[np.complex128]:
+    """Complex Gaussian noise images; white in k-space, so a window or zero filling makes neighbours alike.
+
+    Without either, real and imaginary part of each voxel have standard deviation `sigma`, independently.
+    """
+    white = rng.normal(0.0, sigma, (*shape, 2)).view(complex)[..., 0]
+    if np.all(weight == 1):
+        return white
+    centred = np.fft.ifftshift(weight[:, None] * weight[None, :])
+    return np.asarray(np.fft.ifft2(np.fft.fft2(white) * centred))
 
 
 def discs(
@@ -20,12 +40,13 @@ def discs(
     *,
     matrix: int,
     field_of_view_mm: float,
-    filtering: float = 0.0,
+    weight: Floats | None = None,
 ) -> Floats:
     """Images of uniform discs of height 1, (discs, matrix, matrix), float64; row 0 at the top.
 
     The Fourier transform of a disc is known in closed form; it is sampled as a Cartesian scan samples it,
-    on `matrix` x `matrix` points 1 / field of view apart, windowed, and transformed back. What lies outside
+    on `matrix` x `matrix` points 1 / field of view apart, weighted by `weight` along both axes (see `window`),
+    and transformed back. What lies outside
     the field of view folds in, as it would. Centres are in mm from the image's centre, x to the right, y up.
 
     References
@@ -37,7 +58,7 @@ def discs(
     k = (np.arange(matrix) - matrix // 2) / field_of_view_mm
     size = np.hypot(k[:, None], k[None, :])
     voxel = field_of_view_mm / matrix
-    weight = window(matrix, filtering)
+    weight = np.ones(matrix) if weight is None else weight
     first = -(matrix - 1) / 2 * voxel  # the first voxel's centre; rows run downwards
     out = np.empty((len(x_mm), matrix, matrix))
     spectra: dict[float, Floats] = {}

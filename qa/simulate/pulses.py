@@ -75,7 +75,7 @@ class Profiles:
 
 
 @lru_cache(maxsize=32)
-def profiles(pulses: PulsePair, refocusing_deg: float, points: int = 13) -> Profiles:
+def profiles(pulses: PulsePair, refocusing_deg: float, points: int = 41) -> Profiles:
     """Profiles of a 90 degree excitation and a refocusing pulse of `refocusing_deg`, by Bloch integration.
 
     Crushers are taken to remove all that the refocusing pulse does not refocus, so only its effective

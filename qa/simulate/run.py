@@ -10,7 +10,7 @@ import numpy as np
 from qa.errors import VialbookError
 from qa.simulate import classic, enhanced
 from qa.simulate.header import ScanData, uid
-from qa.simulate.scene import images, lay, records, repeat_of, times_of
+from qa.simulate.scene import images, lay, parts, records, repeat_of, times_of
 from qa.simulate.truth import Form, RunRecord, RunTruth
 from qa.site.plate import Plate
 from qa.site.recipe import Recipe
@@ -50,22 +50,25 @@ def simulate_run(
         if scan.name in truth.omitted or len(times) == 0:
             continue
         by_ti = scan.method in ("inversion-recovery", "saturation-recovery")
-        data = ScanData(
-            scan=scan,
-            number=number,
-            frames=images(scan, truth, plate, layout, rng),
-            ti_ms=tuple(float(t) for t in times) if by_ti else (None,) * len(times),
-            te_ms=(truth.inversion_te_ms,) * len(times) if by_ti else tuple(float(t) for t in times),
-            tr_ms=repeat_of(scan, truth),
-            identity=identity,
-        )
-        try:
-            if form == "enhanced":
-                paths += enhanced.write(folder, truth, data, study)
-            else:
-                paths += classic.write(folder, truth, data, study, series_per_time=form == "classic")
-        except OSError as error:
-            raise VialbookError(f"cannot write a simulated run: {error}", str(folder)) from error
+        frames = images(scan, truth, plate, layout, rng)
+        for part, values in parts(frames, truth).items():
+            data = ScanData(
+                scan=scan,
+                number=number,
+                frames=values,
+                ti_ms=tuple(float(t) for t in times) if by_ti else (None,) * len(times),
+                te_ms=(truth.inversion_te_ms,) * len(times) if by_ti else tuple(float(t) for t in times),
+                tr_ms=repeat_of(scan, truth),
+                identity=identity,
+                part=part,
+            )
+            try:
+                if form == "enhanced":
+                    paths += enhanced.write(folder, truth, data, study)
+                else:
+                    paths += classic.write(folder, truth, data, study, series_per_time=form == "classic")
+            except OSError as error:
+                raise VialbookError(f"cannot write a simulated run: {error}", str(folder)) from error
     record = RunRecord(
         folder=folder,
         files=tuple(paths),

@@ -3,19 +3,22 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import Literal
 
 import numpy as np
+from numpy.typing import NDArray
 
 from qa.errors import VialbookError
 from qa.simulate import sequences
-from qa.simulate.kspace import discs
+from qa.simulate.kspace import discs, noise, window
 from qa.simulate.pulses import profiles
 from qa.simulate.truth import RunTruth, VialRecord
 from qa.site.plate import Plate
 from qa.site.recipe import Scan
 from qa.words import Floats
 
-_INFLECTIONS = 3  # flip factors per vial at which the signal is worked out; a parabola joins them
+Frames = NDArray[np.complex128]
+Part = Literal["magnitude", "real", "imaginary"]
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -37,6 +40,7 @@ def lay(plate: Plate, truth: RunTruth) -> Layout:
     cos, sin = np.cos(angle), np.sin(angle)
     mirror = -1.0 if truth.flipped else 1.0
     scale = truth.scanner.gradient_scale
+    weight = window(truth.matrix, truth.scanner.filtering, truth.sampled)
 
     def to_image(x: Floats, y: Floats) -> tuple[Floats, Floats]:
         across = scale * (mirror * x * cos - y * sin) + truth.shift_mm[0]
@@ -51,7 +55,7 @@ def lay(plate: Plate, truth: RunTruth) -> Layout:
             scale * np.array(radius),
             matrix=truth.matrix,
             field_of_view_mm=truth.field_of_view_mm,
-            filtering=truth.scanner.filtering,
+            weight=weight,
         )
 
     spacing = truth.field_of_view_mm / truth.matrix
@@ -157,8 +161,10 @@ def signals(scan: Scan, truth: RunTruth, t1_ms: Floats, t2_ms: Floats, flip: Flo
     return np.asarray(train[..., np.rint(times / spacing).astype(int) - 1])
 
 
-def images(scan: Scan, truth: RunTruth, plate: Plate, layout: Layout, rng: np.random.Generator) -> Floats:
-    """Frames of one scan, (times, matrix, matrix); a fully relaxed vial at TE = 0 has height 1, noise included.
+def images(scan: Scan, truth: RunTruth, plate: Plate, layout: Layout, rng: np.random.Generator) -> Frames:
+    """Complex frames of one scan, (times, matrix, matrix), noise included; phase corrected.
+
+    A fully relaxed vial at TE = 0 and of a full slice has height 1 before receive shading.
 
     The signal's dependence on the local flip angle is followed inside each vial by a parabola through three
     flip factors. Coil fields are multiplied in after the k-space window: they vary over centimetres.
@@ -186,8 +192,16 @@ def images(scan: Scan, truth: RunTruth, plate: Plate, layout: Layout, rng: np.ra
             for frame in range(len(times)):
                 clean[frame] += layout.fill * np.interp(layout.transmit, levels, at[:, frame])
     clean *= layout.receive
-    sigma = 1.0 / truth.scanner.snr
-    real = clean + rng.normal(0.0, sigma, clean.shape)
-    if truth.signed:
-        return real
-    return np.hypot(real, rng.normal(0.0, sigma, clean.shape))
+    weight = window(truth.matrix, truth.scanner.filtering, truth.sampled)
+    return np.asarray(clean + noise(clean.shape, 1.0 / truth.scanner.snr, weight, rng))
+
+
+def parts(frames: Frames, truth: RunTruth) -> dict[Part, Floats]:
+    """The images that are written: magnitude, real part, or both parts under a phase that varies over the image."""
+    if truth.written == "magnitude":
+        return {"magnitude": np.abs(frames)}
+    if truth.written == "real":
+        return {"real": frames.real}
+    turn = np.linspace(-1.0, 1.0, truth.matrix)
+    turned = frames * np.exp(1j * (0.7 + 0.9 * turn[None, :] - 0.6 * turn[:, None]))
+    return {"real": turned.real, "imaginary": turned.imag}

@@ -24,7 +24,8 @@ from qa.words import Quantity
 
 Shape = Literal["hard", "gaussian", "sinc", "hamming-sinc", "hann-sinc"]
 Form = Literal["classic", "enhanced", "one-series"]
-Scaling = Literal["counts", "slope-per-frame"]
+Scaling = Literal["counts", "slope-per-frame", "private-slope"]
+Written = Literal["magnitude", "real", "real-imaginary"]
 
 
 @dataclass(frozen=True, slots=True)
@@ -109,6 +110,7 @@ class ScannerTruth:
     gradient_scale: float = 1.0  # size in the image over true size
     filtering: float = 0.0  # 0: none; 0.46: Hamming window over k-space
     scaling: Scaling = "counts"
+    private_creator: str = ""  # for private-slope: owner of the group 2005 block in which the slope is written
 
 
 @dataclass(frozen=True, slots=True)
@@ -134,7 +136,9 @@ class RunTruth:
     tr_ms: Mapping[str, float] = field(default_factory=dict)  # scan name = TR really used, where not the recipe's
     skipped: Mapping[str, tuple[float, ...]] = field(default_factory=dict)  # scan name = TIs or TEs not acquired
     omitted: tuple[str, ...] = ()  # names of scans not done at all
-    signed: bool = False  # real part after phase correction instead of magnitude
+    written: Written = "magnitude"  # real: after phase correction; real-imaginary: both parts, uncorrected phase
+    sampled: int | None = None  # k-space lines really sampled, the rest filled with zeros; None: as many as matrix
+    left_out: tuple[str, ...] = ()  # DICOM keywords that this scanner's files lack
     note: str = ""
 
     def vial(self, label: str) -> VialTruth:
@@ -143,6 +147,11 @@ class RunTruth:
             if vial.label == label:
                 return vial
         raise KeyError(label)
+
+    @property
+    def signed(self) -> bool:
+        """Whether pixels can be negative."""
+        return self.written != "magnitude"
 
     def as_json(self) -> dict[str, Any]:
         """Plain types only."""

@@ -39,16 +39,8 @@ _OF_RUN = (
     *(_M.verdict, _M.reasons, _M.limits_digest, _M.judged_at, _M.centre_x_mm, _M.centre_y_mm, _M.centre_z_mm),
     *(_M.centre_row, _M.centre_column, _M.rotation_deg, _M.flipped, _M.scale, _M.residual_mm, _M.confidence),
     *(_M.seen, _M.missing, _M.software, _M.coil, _M.field_t, _M.remarks, _M.shared, _M.run_void, _M.measured_at),
-    *(
-        _M.vialbook_version,
-        _M.files,
-        _M.files_digest,
-        _M.reason,
-        _M.method_fingerprint,
-        _M.method_versions,
-        _RUN.study_uid,
-        _M.facts,
-    ),
+    *(_M.vialbook_version, _M.files, _M.files_digest, _M.reason, _M.method_fingerprint, _M.method_versions),
+    *(_RUN.study_uid, _M.facts),
 )
 
 
