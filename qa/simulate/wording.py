@@ -6,6 +6,8 @@ import re
 
 from qa.errors import SiteError
 
+_INNERMOST = re.compile(r"(?<!\\)\((?:\?:)?([^()|]*)(?:\|[^()]*)?\)")
+
 
 def accepted(pattern: str, tail: str = "") -> str:
     """A readable text that `pattern` matches in full, with `tail` if the pattern lets it.
@@ -15,8 +17,7 @@ def accepted(pattern: str, tail: str = "") -> str:
     SiteError
         If no simple text is found; recipes for simulation want plain patterns such as ``"IR.*"``.
     """
-    alternative = re.split(r"(?<!\\)\|", pattern)[0].strip("()^$")
-    alternative = alternative.removeprefix("?:").removeprefix("?i").lstrip(")")
+    alternative = re.split(r"(?<!\\)\|", _without_groups(pattern.removeprefix("(?i)")))[0].strip("^$")
     plain = re.sub(r"\\[sS][*+]?|\[[ _-]+\][*+?]?", " ", alternative)
     plain = re.sub(r"\\d[*+]?|\[0-9\][*+]?", "1", plain)
     plain = re.sub(r"\\b|\.\*|\.\+|\.\?|(?<=\w)\?", "", plain)
@@ -34,3 +35,10 @@ def accepted(pattern: str, tail: str = "") -> str:
         f"the simulator cannot think of a text that matches '{pattern}'",
         remedy="Use a plain pattern in the recipe, such as 'IR.*'.",
     )
+
+
+def _without_groups(pattern: str) -> str:
+    """The pattern with each group replaced by its first alternative, from the inside out."""
+    while (shorter := _INNERMOST.sub(r"\1", pattern)) != pattern:
+        pattern = shorter
+    return pattern

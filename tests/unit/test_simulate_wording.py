@@ -22,6 +22,7 @@ from qa.simulate.wording import accepted
         r"a\.b.*",
         "(?:one|two) [0-9]+",
         r"\bIR\b.*",
+        "(?i)qa (ir|se)( train)?.*",
     ],
 )
 @pytest.mark.parametrize("tail", ["", "TI35"])
