@@ -13,6 +13,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING
 
 from qa import intake
+from qa.answers import drift
 from qa.intake.series import Held, Session
 from qa.measure import measure
 from qa.methods import fingerprint
@@ -23,7 +24,7 @@ from qa.temperature import FROM_COMMAND, FROM_LOG, FROM_TABLE, RunTemperature
 from qa.words import Consequence, Remark, Verdict
 
 if TYPE_CHECKING:
-    from qa.trend import Judgement
+    from qa.trend import Judgement, Trend
 
 Progress = Callable[[str, int, int], None]  # what is being done, how many are done, out of how many
 
@@ -67,7 +68,6 @@ def ingest(
     """Take in folders and files of DICOM: everything that is not known yet is measured, stored, judged and reported."""
     tell = progress or _silent
     with open_book(site) as book:
-        book.note_limits(site.limits)
         taken = intake.gather(paths, site, known=book.known_files(), progress=progress)
         held = list(taken.held)
         recorded: dict[str, tuple[Session, Measurement, int]] = {}
@@ -85,11 +85,13 @@ def ingest(
         tell("measuring runs", len(sessions), len(sessions))
         book.hold(held)
         book.release([record.sha256 for session, _, _ in recorded.values() for record in session.files])
+        day = today or datetime.now(site.timezone).date()
         verdicts = judge_book(book, site)
+        keep_findings(book, site, day)
         front = None
         if report:
             tell("writing pages", 0, 1)
-            front = write_report(site, book=book, runs=list(recorded) if recorded else None, today=today)
+            front = write_report(site, book=book, runs=list(recorded), today=day)
             tell("writing pages", 1, 1)
         outcomes = [_outcome(session, m, g, verdicts, front) for session, m, g in recorded.values()]
     used = taken.seen - taken.duplicates - len(held)
@@ -129,36 +131,55 @@ def temperature_of(book: Book, site: Site, session: Session, celsius: float | No
     return RunTemperature.unknown(site.plausible_c)
 
 
-def judge_book(book: Book, site: Site) -> dict[str, Judgement]:
-    """Judge every run that has no verdict yet, and every later run of the same scanner and phantom.
+def judge_book(book: Book, site: Site, again: tuple[str | None, datetime] | None = None) -> dict[str, Judgement]:
+    """Judge every run that has no verdict yet, and every later run of the same scanner.
 
     Software and coil changes that the runs themselves show become log entries first. A verdict is stored only where
     it is new or differs, so judging twice changes nothing.
+
+    Parameters
+    ----------
+    again : a scanner (None: all) and a time: its runs since then are judged again too, as after a log entry that
+        restarts their baseline
     """
     from qa import trend
 
     runs = book.runs()
-    waiting = runs[runs["verdict"].isna()]
-    if waiting.empty:
+    waiting = runs["verdict"].isna()
+    if again is not None:
+        scanner, since = again
+        waiting |= (runs["acquired"] >= since) & ((runs["scanner"] == scanner) | (scanner is None))
+    waiting_runs = runs[waiting]
+    if waiting_runs.empty:
         return {}
     for entry in trend.log_entries_from_runs(runs):
-        book.add_log_entry(**entry)
+        book.add_log_entry(entry.at, entry.scanner, None, entry.kind, entry.text, source="dicom")
+    limits = book.note_limits(site.limits).digest
     log = book.log_entries()
     judged: dict[str, Judgement] = {}
-    for (scanner, phantom), group in waiting.groupby(["scanner", "phantom"]):
-        history = book.readings(scanner=scanner, phantom=phantom)
-        own = runs[(runs["scanner"] == scanner) & (runs["phantom"] == phantom)]
-        since = group["acquired"].min()
-        asked = list(own.loc[own["acquired"] >= since, "run"])
+    for scanner, group in waiting_runs.groupby("scanner"):
+        name = str(scanner)
         judged |= trend.judge(
-            history, log, site.limits, runs=asked, run_table=own, baseline_runs=site.baseline_runs, zone=site.timezone
+            book.readings(scanner=name),
+            log,
+            site.limits,
+            runs=runs[(runs["scanner"] == name) & (runs["acquired"] >= group["acquired"].min())],
+            baseline_runs=site.baseline_runs,
+            schedule_days=site.shortest_days(name),
+            timezone=site.timezone,
         )
-    stored = runs.set_index("run")
-    for run, judgement in judged.items():
-        row = stored.loc[run]
-        if row["verdict"] != judgement.verdict or list(row["reasons"]) != list(judgement.reasons):
-            book.set_verdict(run, int(row["generation"]), judgement.verdict, judgement.reasons, judgement.limits_digest)
+    for row in runs[runs["run"].isin(list(judged))].to_dict("records"):
+        judgement = judged[row["run"]]
+        if row["verdict"] != judgement.verdict or list(row["reasons"] or ()) != list(judgement.reasons):
+            book.set_verdict(row["run"], row["generation"], judgement.verdict, judgement.reasons, limits)
     return judged
+
+
+def keep_findings(book: Book, site: Site, today: date) -> Trend:
+    """Look for what has moved and keep the open findings in the book: new ones are raised, known ones grow."""
+    trend = drift(book, site, today)
+    book.save_findings([one.as_dict() for one in trend.findings if one.state == "open"], complete=True)
+    return trend
 
 
 def write_report(
@@ -190,7 +211,7 @@ def _without(session: Session, held: Iterable[Held]) -> Session:
 def _outcome(
     session: Session, measurement: Measurement, generation: int, verdicts: dict[str, Judgement], front: Path | None
 ) -> RunOutcome:
-    judgement = verdicts[session.run]
+    judgement = verdicts[session.run]  # a run just recorded has no verdict before it is judged
     page = front.parent / "runs" / f"{session.run}.html" if front is not None else None
     return RunOutcome(
         run=session.run,

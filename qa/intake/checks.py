@@ -10,6 +10,8 @@ import numpy as np
 from qa.site.recipe import Recipe, Scan
 from qa.words import Consequence, Floats, Quantity, Remark
 
+FAR_OFF = 0.1  # a TR further off than this part of the recipe's is another protocol, not a drift of it
+
 
 def check_scan(scan: Scan, ti_ms: Floats, te_ms: Floats, tr_ms: Floats) -> list[Remark]:
     """All departures of one scan's times (ms, one per frame, NaN where not stated) from the recipe.
@@ -54,6 +56,10 @@ def _repetition_time(scan: Scan, ti_ms: Floats, te_ms: Floats, tr_ms: Floats) ->
     if len(off) == 0:
         return []
     text = f"TR is {_listed(np.unique(off))} ms, the recipe says {scan.tr_ms:g} ms"
+    if float(np.max(np.abs(off - scan.tr_ms))) > FAR_OFF * scan.tr_ms:
+        return [
+            Remark("tr-far-off", f"{text}: this is another protocol; scan again with the right one", Consequence.VOID)
+        ]
     return [Remark("tr-differs", text, Consequence.WATCH)]
 
 

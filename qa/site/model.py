@@ -74,6 +74,10 @@ class Site(SiteModel):
         """The first line of the schedule for that scanner and phantom."""
         return next((s for s in self.schedules if (s.scanner, s.phantom) == (scanner, phantom)), None)
 
+    def shortest_days(self, scanner: str) -> int:
+        """Days between runs of that scanner, by the densest line of its schedule; 7 where it has none."""
+        return min((s.every_days for s in self.schedules if s.scanner == scanner), default=7)
+
     def celsius(self, scanner: str, when: datetime) -> float | None:
         """What temperatures.csv says for that scanner on that day, degrees Celsius."""
         return self.temperatures.celsius(scanner, when, self.timezone)
