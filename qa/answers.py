@@ -11,8 +11,9 @@ from datetime import date, datetime
 from typing import TYPE_CHECKING, Any
 
 from qa.due import DueRow, DueState, due, last_run_days
+from qa.errors import NoBookError
 from qa.site import Site
-from qa.store import Book
+from qa.store import Book, open_book
 from qa.words import Verdict, worst
 
 if TYPE_CHECKING:
@@ -71,6 +72,15 @@ def agreement(book: Book, *, since: date | None = None, until: date | None = Non
 def schedule(book: Book, site: Site, today: date) -> tuple[DueRow, ...]:
     """What the schedule asks for on `today`, the most overdue first."""
     return due(site, last_run_days(site, book.runs()), today)
+
+
+def schedule_on(site: Site, today: date) -> tuple[DueRow, ...]:
+    """As `schedule`, for a site whose book may not exist yet: then nothing was ever run."""
+    try:
+        with open_book(site, create=False) as book:
+            return schedule(book, site, today)
+    except NoBookError:
+        return due(site, {}, today)
 
 
 def decisions(book: Book) -> dict[str, str]:

@@ -45,6 +45,10 @@ class StoreError(VialbookError):
     """The database cannot be opened, read or written."""
 
 
+class NoBookError(StoreError):
+    """There is no database yet: nothing was ever taken in."""
+
+
 class OldBookError(StoreError):
     """The database was made by another version of Vialbook and has to be migrated first (exit code 2)."""
 

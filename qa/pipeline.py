@@ -6,14 +6,14 @@ a rerun finds what was recorded, takes the rest and ends in the same state as an
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterable, Sequence
+from collections.abc import Callable, Iterable, Mapping, Sequence
 from dataclasses import dataclass, replace
 from datetime import date, datetime
 from pathlib import Path
 from typing import TYPE_CHECKING
 
 from qa import intake
-from qa.answers import drift
+from qa.answers import ScannerToday, drift, scanners_today
 from qa.intake.series import Held, Session
 from qa.measure import measure
 from qa.methods import fingerprint
@@ -48,11 +48,12 @@ class RunOutcome:
 class IngestOutcome:
     """What an ingest did with every file it saw: seen = used + duplicate + held."""
 
-    runs: tuple[RunOutcome, ...]
+    runs: tuple[RunOutcome, ...]  # measured, or first judged, by this ingest; by time
     held: tuple[Held, ...]
     seen: int
     used: int
     duplicate: int
+    scanners: tuple[ScannerToday, ...]  # every scanner as it now stands
     front_page: Path | None
 
 
@@ -65,37 +66,47 @@ def ingest(
     report: bool = True,
     today: date | None = None,
 ) -> IngestOutcome:
-    """Take in folders and files of DICOM: everything that is not known yet is measured, stored, judged and reported."""
+    """Take in folders and files of DICOM: everything that is not known yet is measured, stored, judged and reported.
+
+    Parameters
+    ----------
+    celsius : temperature of all runs taken in now; absent: from the log, else from temperatures.csv
+    today : the day for what is due and overdue; absent: now, in the site's time zone
+    """
     tell = progress or _silent
+    day = today or datetime.now(site.timezone).date()
     with open_book(site) as book:
         taken = intake.gather(paths, site, known=book.known_files(), progress=progress)
         held = list(taken.held)
-        recorded: dict[str, tuple[Session, Measurement, int]] = {}
-        sessions = sorted(taken.sessions, key=lambda one: one.acquired)
-        for number, session in enumerate(sessions):
-            tell("measuring runs", number, len(sessions))
+        measured: dict[str, Measurement] = {}
+        used: list[str] = []
+        for number, session in enumerate(sorted(taken.sessions, key=lambda one: one.acquired)):
+            tell("measuring runs", number, len(taken.sessions))
             earlier = book.run_files(session.run)
             whole = intake.merge(session, earlier, site) if earlier else session
             measurement, also_held = measure_session(book, site, whole, celsius)
             held += also_held
             whole = _without(whole, also_held)
             reason = "more files of this run arrived" if earlier else "first measured"
-            generation = book.record(whole, measurement, method_fingerprint=fingerprint(), reason=reason)
-            recorded[whole.run] = (whole, measurement, generation)
-        tell("measuring runs", len(sessions), len(sessions))
+            book.record(whole, measurement, method_fingerprint=fingerprint(), reason=reason)
+            measured[whole.run] = measurement
+            used += [record.sha256 for record in whole.files]
+        tell("measuring runs", len(taken.sessions), len(taken.sessions))
         book.hold(held)
-        book.release([record.sha256 for session, _, _ in recorded.values() for record in session.files])
-        day = today or datetime.now(site.timezone).date()
-        verdicts = judge_book(book, site)
-        keep_findings(book, site, day)
+        book.release(used)
+        waiting = book.runs()
+        new = [*waiting.loc[waiting["verdict"].isna(), "run"]]
+        judged = judge_book(book, site)
+        trend = keep_findings(book, site, day)
         front = None
         if report:
             tell("writing pages", 0, 1)
-            front = write_report(site, book=book, runs=list(recorded), today=day)
+            front = write_report(site, book=book, runs=list(judged), today=day)
             tell("writing pages", 1, 1)
-        outcomes = [_outcome(session, m, g, verdicts, front) for session, m, g in recorded.values()]
-    used = taken.seen - taken.duplicates - len(held)
-    return IngestOutcome(tuple(outcomes), tuple(held), taken.seen, used, taken.duplicates, front)
+        outcomes = _outcomes(book, new, measured, front)
+        scanners = scanners_today(book, site, day, trend)
+    rest = taken.seen - taken.duplicates - len(held)
+    return IngestOutcome(outcomes, tuple(held), taken.seen, rest, taken.duplicates, scanners, front)
 
 
 def measure_session(
@@ -187,19 +198,30 @@ def write_report(
     *,
     book: Book | None = None,
     out: Path | None = None,
-    runs: list[str] | None = None,
+    runs: Sequence[str] | None = None,
     single_file: bool = False,
     today: date | None = None,
 ) -> Path:
-    """Write the pages (of `runs` only, and those that speak of the whole site; None: all) and give the front page."""
+    """Write the pages and give the front page.
+
+    Parameters
+    ----------
+    book : an open book; absent: the site's is opened
+    out : folder for the pages; absent: ``pages`` in the site folder
+    runs : write only these run pages, and those that are missing; absent: all
+    single_file : every page whole in itself, to be mailed
+    """
     from qa.report import write_pages
 
-    folder = out or site.folder / "pages"
+    folder = out or site.pages
     day = today or datetime.now(site.timezone).date()
-    if book is not None:
-        return write_pages(book, site, folder, today=day, single_file=single_file, runs=runs)
-    with open_book(site, create=False) as opened:
-        return write_pages(opened, site, folder, today=day, single_file=single_file, runs=runs)
+    if book is None:
+        with open_book(site, create=False) as opened:
+            return write_report(site, book=opened, out=out, runs=runs, single_file=single_file, today=day)
+    wanted = None
+    if runs is not None:
+        wanted = [run for run in book.runs()["run"] if run in runs or not (folder / "runs" / f"{run}.html").exists()]
+    return write_pages(book, site, folder, today=day, single_file=single_file, runs=wanted)
 
 
 def _without(session: Session, held: Iterable[Held]) -> Session:
@@ -208,22 +230,29 @@ def _without(session: Session, held: Iterable[Held]) -> Session:
     return replace(session, files=tuple(record for record in session.files if record.sha256 not in refused))
 
 
-def _outcome(
-    session: Session, measurement: Measurement, generation: int, verdicts: dict[str, Judgement], front: Path | None
-) -> RunOutcome:
-    judgement = verdicts[session.run]  # a run just recorded has no verdict before it is judged
-    page = front.parent / "runs" / f"{session.run}.html" if front is not None else None
-    return RunOutcome(
-        run=session.run,
-        generation=generation,
-        scanner=session.scanner,
-        phantom=session.phantom,
-        acquired=session.acquired,
-        measurement=measurement,
-        verdict=judgement.verdict,
-        reasons=tuple(judgement.reasons),
-        report=page if page is not None and page.exists() else None,
-    )
+def _outcomes(
+    book: Book, new: Iterable[str], measured: Mapping[str, Measurement], front: Path | None
+) -> tuple[RunOutcome, ...]:
+    """The runs of `new` as the book now has them, by time."""
+    rows = book.runs()
+    outcomes = []
+    for row in rows[rows["run"].isin(list(new))].to_dict("records"):
+        run = str(row["run"])
+        page = front.parent / "runs" / f"{run}.html" if front is not None else None
+        outcomes.append(
+            RunOutcome(
+                run=run,
+                generation=int(row["generation"]),
+                scanner=str(row["scanner"]),
+                phantom=str(row["phantom"]),
+                acquired=row["acquired"].to_pydatetime(),
+                measurement=measured[run] if run in measured else book.measurement(run),
+                verdict=Verdict(row["verdict"]),
+                reasons=tuple(row["reasons"] or ()),
+                report=page if page is not None and page.exists() else None,
+            )
+        )
+    return tuple(outcomes)
 
 
 def _silent(doing: str, done: int, total: int) -> None:

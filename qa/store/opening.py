@@ -9,7 +9,7 @@ from typing import Any
 from sqlalchemy import Connection, Engine, inspect, text
 
 from qa import __version__
-from qa.errors import StoreError
+from qa.errors import NoBookError, StoreError
 from qa.store.book import Book
 from qa.store.engine import book_url, explained, is_sqlite, make_engine, shown, sqlite_file, use_wal
 from qa.store.ledger import append
@@ -43,7 +43,7 @@ def open_book(site_or_url: Any, *, create: bool = True, clock: Callable[[], date
     where = shown(url)
     file = sqlite_file(url)
     if file is not None and not file.exists() and not create:
-        raise StoreError("there is no book yet", where, "Take in a first run: vialbook ingest FOLDER.")
+        raise NoBookError("there is no book yet", where, "Take in a first run: vialbook ingest FOLDER.")
     if file is not None and not file.parent.is_dir():
         raise StoreError("the folder of the database does not exist", where, "Make it, or correct `database`.")
     engine = make_engine(url)
@@ -72,7 +72,7 @@ def _make_ready(engine: Engine, where: str, create: bool, clock: Callable[[], da
         stored = _create(engine, clock())
     if stored is None:
         if empty:
-            raise StoreError("there is no book yet", where, "Take in a first run: vialbook ingest FOLDER.")
+            raise NoBookError("there is no book yet", where, "Take in a first run: vialbook ingest FOLDER.")
         what = "this database belongs to another program: it has tables, but none of Vialbook's"
         raise StoreError(what, where, "Nothing was changed. Give Vialbook a database of its own in site.toml.")
     check_revision(stored, where)

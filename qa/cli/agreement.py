@@ -1,0 +1,1 @@
+"""How agreement between scanners is told in a terminal."""
