@@ -132,7 +132,8 @@ class TomlFile:
 
 def nearest(word: str, known: tuple[str, ...] | list[str]) -> str:
     """``; did you mean 'radius_mm'?`` or, where nothing is near, what there is."""
-    close = difflib.get_close_matches(word, known, n=1, cutoff=0.5)
+    close = difflib.get_close_matches(word, known, n=3, cutoff=0.5)
+    close.sort(key=lambda one: sorted(one) != sorted(word))  # swapped letters are the likeliest slip
     return f"; did you mean '{close[0]}'?" if close else f"; known here: {', '.join(known)}"
 
 
