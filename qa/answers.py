@@ -125,7 +125,7 @@ def _today(
     findings = tuple(one for one in standing if name in one.scanners)
     if runs.empty:
         return ScannerToday(name, None, "No run yet: nothing can be said.", (), None, None, mine, findings)
-    latest: list[dict[str, Any]] = runs.groupby("phantom", sort=True).tail(1).to_dict("records")
+    latest: list[Any] = runs.groupby("phantom", sort=True).tail(1).to_dict("records")
     last = max(latest, key=lambda row: row["acquired"])
     verdicts = [Verdict(row["verdict"]) for row in latest if row["verdict"]]
     reasons = [text for row in latest for text in row["reasons"] or () if row["verdict"] != Verdict.STEADY]

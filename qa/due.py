@@ -66,8 +66,8 @@ def due(site: Site, last_runs: Mapping[tuple[str, str], date], today: date) -> t
 
 def last_run_days(site: Site, runs: pd.DataFrame) -> dict[tuple[str, str], date]:
     """The day of the latest run of each scanner and phantom, from the tidy frame of runs."""
-    latest = runs.groupby(["scanner", "phantom"])["acquired"].max()
+    newest = runs.sort_values("acquired").groupby(["scanner", "phantom"]).tail(1)
     return {
-        (str(scanner), str(phantom)): when.astimezone(site.timezone).date()
-        for (scanner, phantom), when in latest.items()  # type: ignore[misc]  # pandas types an index entry as Hashable
+        (str(row["scanner"]), str(row["phantom"])): row["acquired"].astimezone(site.timezone).date()
+        for row in newest.to_dict("records")
     }

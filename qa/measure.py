@@ -23,7 +23,7 @@ from qa.plausible import doubts
 from qa.reading import Budget, Curve, Measurement, Picture, Reading
 from qa.site.plate import Plate, Reference
 from qa.temperature import RunTemperature, correct
-from qa.words import Consequence, Floats, Quantity, Remark, State
+from qa.words import Consequence, Floats, Ints, Quantity, Remark, State
 
 PATCH_VOXELS = 9.0  # voxels over which differences inside a vial are taken to hang together (a 3 x 3 patch)
 FEW_VOXELS = 5  # fewer voxels than this are used, but marked
@@ -339,5 +339,5 @@ def _median_or(values: Floats, otherwise: float | None) -> float:
     return float("nan") if otherwise is None else float(otherwise)
 
 
-def _at(values: Floats | None, index: Floats) -> Floats | None:
+def _at(values: Floats | None, index: Ints) -> Floats | None:
     return None if values is None else values[index]

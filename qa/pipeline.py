@@ -158,8 +158,7 @@ def judge_book(book: Book, site: Site, again: tuple[str | None, datetime] | None
     runs = book.runs()
     waiting = runs["verdict"].isna()
     if again is not None:
-        scanner, since = again
-        waiting |= (runs["acquired"] >= since) & ((runs["scanner"] == scanner) | (scanner is None))
+        waiting |= (runs["acquired"] >= again[1]) & ((runs["scanner"] == again[0]) | (again[0] is None))
     waiting_runs = runs[waiting]
     if waiting_runs.empty:
         return {}

@@ -40,7 +40,7 @@ def audit(
         problems = book.audit(None if no_originals else Archive(place.archive), progress, given)
         now = book.anchor()
         ledger = book.ledger()
-        originals = 0 if no_originals else len(book.known_files())
+        originals = 0 if no_originals else int(book.runs()["files"].sum())
         rulings = book.rulings().to_dict("records")
     for problem in problems:
         terminal.line(f"{'!!' if problem.grave else '! '} {problem.code}: {problem.text}")

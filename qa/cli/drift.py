@@ -60,7 +60,7 @@ def drift(
 def _settled(one: dict[str, Any], settles: tuple[str, ...]) -> bool:
     if one["state"] == "ruled":
         return bool(one["rulings"]) and one["rulings"][-1]["decision"] in settles
-    return one["state"] != "open"
+    return bool(one["state"] != "open")
 
 
 def _tell(terminal: Terminal, told: dict[str, Any], trend: Trend, scanner: str | None) -> None:

@@ -5,7 +5,6 @@ import sqlite3
 
 import pandas as pd
 import pytest
-
 from command import TODAY, answer, vialbook
 
 
