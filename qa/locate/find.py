@@ -28,9 +28,9 @@ from qa.words import Floats, Pixels
 SEEN = 0.25  # explained share of the variance from which a vial counts as seen
 MISSING_ALLOWED = 2
 MISSING_SHARE = 0.25  # … of many vials, more
-SURE = 2.4  # score by which the best labelling has to beat every other
+SURE = 2.0  # score by which the best labelling has to beat every other: one vial that is clearly there, or not
 SURE_FIT = 12.0  # log-likelihood by which its centres have to fit better where the score does not tell
-SURE_SHARE = 0.06  # … and as a share of its own score
+SURE_SHARE = 0.04  # … and as a share of its own score
 _SMALLEST = 24  # voxels, shorter side
 
 

@@ -1,6 +1,8 @@
-"""Random placements of random plates: prints mislabelled, refused, rms error of the placement, and time per run.
+"""Random placements of random plates, simulated runs, and images without the plate: what is found, refused, or wrong.
 
-    python tests/bench/locate_trials.py [trials] [seed]
+    python tests/bench/locate_trials.py [trials] [seed] [-v]
+
+Prints mislabelled placements (must be 0), refusals, the rms error of the placements, and the time per run.
 
 Ranges: any rotation, shift up to a few mm from the border, mirrored or not, scale error up to 2 %, shading up to 60 %,
 air, water or gel around, container outline or none, walls 0 to 2 mm, matrices 64 to 512, voxels unequal by up to 1.5,
@@ -12,27 +14,39 @@ from __future__ import annotations
 import sys
 import time
 from collections import Counter
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
+from datetime import UTC, datetime
 from pathlib import Path
 
 import numpy as np
 
 sys.path.insert(0, str(Path(__file__).parents[1] / "unit"))
 from plate_images import ASYMMETRIC, Scene, paint, plate_of, relaxation
+from plate_negatives import NEGATIVES
 
 from qa.locate import NotLocated, locate
 from qa.locate.placement import Placement
+from qa.simulate.scene import images, lay
+from qa.simulate.truth import Bubble, RunTruth, ScannerTruth, Surroundings, VialTruth
 from qa.site.plate import Plate
+from qa.site.recipe import Scan
 
 TI_MS = np.array([35.0, 90.0, 180.0, 350.0, 650.0, 1100.0, 1800.0, 2700.0])
 TE_MS = np.arange(1, 13) * 18.0
+ANY = {"SeriesDescription": ".*"}
+SCANS = (
+    Scan(name="T1", quantity="T1", method="inversion-recovery", match=ANY, ti_ms=TI_MS, tr_ms=5000),
+    Scan(name="T2", quantity="T2", method="spin-echo-train", match=ANY, te_ms=TE_MS, tr_ms=3000),
+)  # fmt: skip
 
 
 def random_plate(rng: np.random.Generator) -> Plate:
-    """One of the invented designs, or vials strewn at random, or a symmetric design made nearly symmetric."""
-    kind = rng.choice(["named", "strewn", "near-symmetric"], p=[0.4, 0.4, 0.2])
+    """One of the invented designs, vials strewn at random, or a symmetric design, near or with one or two key vials."""
+    kind = rng.choice(["named", "strewn", "near-symmetric", "keyed"], p=[0.35, 0.35, 0.15, 0.15])
     if kind == "named":
         return ASYMMETRIC[str(rng.choice(list(ASYMMETRIC)))]()
+    if kind == "keyed":
+        return keyed_plate(rng)
     count = int(rng.integers(5, 31)) if rng.random() < 0.5 else int(rng.integers(10, 17))
     radius = float(rng.uniform(6, 15 if count < 12 else 9 if count < 20 else 7))
     radii = np.full(count, radius)
@@ -57,6 +71,22 @@ def random_plate(rng: np.random.Generator) -> Plate:
                 radii[len(points)] = radii[len(points) - 1]
                 points.append(other)
     return plate_of(kind, [(p.real, p.imag) for p in points], [float(r) for r in radii[: len(points)]])
+
+
+def keyed_plate(rng: np.random.Generator) -> Plate:
+    """Vials in pairs, alike when turned by half a turn or seen from the other face, and one or two that break it."""
+    radius, turned = float(rng.uniform(6, 11)), rng.random() < 0.5
+    pairs, keys = int(rng.integers(3, 12)), int(rng.integers(1, 3))
+    points: list[complex] = []
+    for _ in range(4000):
+        z = complex(*rng.uniform(-72, 72, 2))
+        new = [z] if len(points) >= 2 * pairs else [z, -z if turned else z.conjugate()]
+        apart = [abs(a - b) for a in new for b in points] + [abs(new[0] - z) for z in new[1:]]
+        if abs(z) < 76 and all(gap > 2 * radius + 4 for gap in apart):
+            points += new
+        if len(points) == 2 * pairs + keys:
+            break
+    return plate_of("keyed", [(p.real, p.imag) for p in points], radius)
 
 
 @dataclass
@@ -139,19 +169,17 @@ def error_voxels(trial: Trial, found: Placement) -> tuple[float, float]:
     )
 
 
-def main() -> None:
-    trials = int(sys.argv[1]) if len(sys.argv) > 1 else 500
-    seed = int(sys.argv[2]) if len(sys.argv) > 2 else 1
+def placements(trials: int, seed: int, verbose: bool) -> int:
+    """Random scenes; gives the number of mislabelled ones."""
     refused: Counter[str] = Counter()
     errors: dict[bool, list[float]] = {True: [], False: []}
     wrong = 0
     for number in range(trials):
-        rng = np.random.default_rng([seed, number])
-        trial = random_trial(rng)
+        trial = random_trial(np.random.default_rng([seed, number]))
         found = locate(trial.frames, trial.scene.spacing_mm, trial.scene.plate)
         if isinstance(found, NotLocated):
             refused[f"{trial.scene.plate.name}: {found.code}"] += 1
-            if "-v" in sys.argv:
+            if verbose:
                 print(number, describe(trial), found.code, found.reason)
             continue
         rms, worst = error_voxels(trial, found)
@@ -161,15 +189,93 @@ def main() -> None:
         else:
             exact = trial.scene.offsets_mm is None
             errors[exact].append(rms)
-            if exact and "-v" in sys.argv and rms > 0.1:
+            if exact and verbose and rms > 0.1:
                 print(f"{number} error {rms:.2f} voxels: {describe(trial)}")
-    print(f"trials {trials}, mislabelled {wrong}, refused {sum(refused.values())} {dict(refused)}")
+    print(f"random scenes: {trials}, mislabelled {wrong}, refused {sum(refused.values())} {dict(refused)}")
     for exact, values in errors.items():
         built = "built exactly" if exact else "vials built 0.15 mm off (1 sigma, each way)"
         print(
             f"rms placement error, plate {built}: {np.sqrt(np.mean(np.square(values))):.3f} voxels, "
             f"most {max(values):.3f}"
         )
+    return wrong
+
+
+def simulated(trials: int, seed: int) -> int:
+    """Runs of the simulator (its own physics, coil fields and shading), as measured: through all scans at once."""
+    wrong = refused = 0
+    errors = []
+    for number in range(trials):
+        rng = np.random.default_rng([seed, 1, number])
+        plate = ASYMMETRIC[str(rng.choice(list(ASYMMETRIC)))]()
+        truth = random_truth(plate, rng)
+        layout = lay(plate, truth)
+        frames = np.concatenate([np.abs(images(scan, truth, plate, layout, rng)) for scan in SCANS])
+        spacing = (layout.spacing_mm, layout.spacing_mm)
+        found = locate(frames.astype(np.float32), spacing, plate)
+        if isinstance(found, NotLocated):
+            refused += 1
+            continue
+        rows, columns = found.vial_centres(plate, spacing)
+        apart = np.hypot(rows - layout.rows, columns - layout.columns)
+        if apart.max() * layout.spacing_mm > 0.5 * min(v.radius_mm for v in plate.vials):
+            wrong += 1
+            print(f"MISLABELLED simulated run {number} of {plate.name}, confidence {found.confidence:.2f}")
+        else:
+            errors.append(float(np.sqrt(np.mean(apart**2))))
+    rms, most = float(np.sqrt(np.mean(np.square(errors)))), max(errors)
+    print(f"simulated runs: {trials}, mislabelled {wrong}, refused {refused}")
+    print(f"rms placement error of simulated runs: {rms:.3f} voxels, most {most:.3f}")
+    return wrong
+
+
+def random_truth(plate: Plate, rng: np.random.Generator) -> RunTruth:
+    """A run as a site might scan it: any rotation, either face, up to two vials out, a bubble, imperfect pulses."""
+    count = len(plate.vials)
+    t1 = np.exp(rng.uniform(np.log(60), np.log(2400), count))
+    vials = [
+        VialTruth(v.label, float(t), float(t * rng.uniform(0.05, 0.6))) for v, t in zip(plate.vials, t1, strict=True)
+    ]
+    for k in rng.choice(count, int(rng.integers(0, 3)), replace=False):
+        vials[int(k)] = replace(vials[int(k)], absent=True)
+    for k in rng.choice(count, int(rng.integers(0, 2)), replace=False):
+        hole = Bubble(float(rng.uniform(-3, 3)), float(rng.uniform(-3, 3)), float(rng.uniform(1.5, 3.5)))
+        vials[int(k)] = replace(vials[int(k)], bubbles=(hole,))
+    scanner = ScannerTruth(
+        "any", 3.0, refocusing_deg=float(rng.uniform(130, 180)), transmit_level=float(rng.uniform(0.85, 1.1)),
+        receive_bow=float(rng.uniform(-0.4, 0)), receive_tilt=tuple(rng.uniform(-0.25, 0.25, 2)),
+        snr=float(rng.uniform(30, 200)), gradient_scale=float(rng.uniform(0.985, 1.015)),
+        filtering=float(rng.choice([0.0, 0.46])),
+    )  # fmt: skip
+    return RunTruth(
+        scanner, tuple(vials), datetime(2026, 1, 5, tzinfo=UTC), matrix=int(rng.choice([64, 96, 128])),
+        field_of_view_mm=float(rng.uniform(190, 230)), shift_mm=tuple(rng.uniform(-8, 8, 2)),
+        rotation_deg=float(rng.uniform(-180, 180)), flipped=bool(rng.random() < 0.5),
+        surroundings=Surroundings(radius_mm=88.0) if rng.random() < 0.4 else None,
+    )  # fmt: skip
+
+
+def negatives(trials: int, seed: int) -> int:
+    """Images in which the plate cannot be told; gives the number placed all the same."""
+    wrong = 0
+    for name, make in NEGATIVES.items():
+        codes: Counter[str] = Counter()
+        for number in range(trials):
+            case = make(np.random.default_rng([seed, 2, number]))
+            found = locate(case.frames, case.spacing_mm, case.plate)
+            codes[found.code if isinstance(found, NotLocated) else "PLACED"] += 1
+        wrong += codes["PLACED"]
+        print(f"without the plate, {name}: {dict(codes)}")
+    return wrong
+
+
+def main() -> None:
+    words = [word for word in sys.argv[1:] if word != "-v"]
+    trials = int(words[0]) if words else 500
+    seed = int(words[1]) if len(words) > 1 else 1
+    wrong = placements(trials, seed, "-v" in sys.argv)
+    wrong += simulated(max(1, trials // 2), seed)
+    wrong += negatives(max(1, trials // 10), seed)
     for size in (64, 128, 256):
         spent = []
         for number in range(12):
@@ -178,6 +284,8 @@ def main() -> None:
             locate(trial.frames, trial.scene.spacing_mm, trial.scene.plate)
             spent.append(1e3 * (time.perf_counter() - start))
         print(f"matrix {size}: median {np.median(spent):.0f} ms a run")
+    print("nothing mislabelled" if not wrong else f"MISLABELLED OR PLACED WRONGLY: {wrong}")
+    sys.exit(1 if wrong else 0)
 
 
 def describe(trial: Trial) -> str:
