@@ -13,9 +13,10 @@ import numpy as np
 from qa.errors import ArchiveError
 from qa.intake.archive import Archive
 from qa.intake.checks import check_scan, missing_scans
-from qa.intake.header import FileHeader, FrameHeader, HeaderProblem
+from qa.intake.claims import HeaderProblem
+from qa.intake.header import FileHeader, FrameHeader
 from qa.intake.holds import hold
-from qa.intake.pixels import FOREIGN_BYTES, decode, scale_of, scaled
+from qa.intake.pixels import FOREIGN_BYTES, decode, scale_of, scaled, told
 from qa.intake.reader import parse, quiet_pydicom
 from qa.intake.series import FrameSource, Grid, Held, Series, Session
 from qa.site.recipe import Recipe, Scan
@@ -190,13 +191,13 @@ def _decode(session: Session, file: FileHeader) -> _Decoded | Held:
             dataset = parse(Archive(session.archive).read(file.sha256))
         stored = decode(dataset, len(file.frames))
         scales = [scale_of(dataset, head.index) for head in file.frames]
+        pixels = np.stack([scaled(one, slope, offset) for one, (_, slope, offset) in zip(stored, scales, strict=True)])
     except ArchiveError as error:
         return hold(file.path, "archive-lost", error.what, file.sha256)
     except HeaderProblem as problem:
         return hold(file.path, problem.code, problem.detail, file.sha256)
     except FOREIGN_BYTES as error:
-        return hold(file.path, "damaged", str(error)[:200] or type(error).__name__, file.sha256)
-    pixels = np.stack([scaled(frame, slope, offset) for frame, (_, slope, offset) in zip(stored, scales, strict=True)])
+        return hold(file.path, "damaged", told(error), file.sha256)
     return _Decoded(pixels, tuple(kind for kind, _, _ in scales))
 
 

@@ -11,7 +11,8 @@ from qa.errors import ArchiveError
 from qa.intake.archive import Archive, content_hash
 from qa.intake.header import FileHeader
 from qa.intake.holds import hold
-from qa.intake.reader import DatasetCache, looks_like_dicom, quiet_pydicom, read_file
+from qa.intake.persons import blanked, personal_keywords
+from qa.intake.reader import DatasetCache, looks_like_dicom, parse, quiet_pydicom, read_file
 from qa.intake.series import FileRecord, Held, Session
 from qa.intake.walk import files_below
 from qa.site import Site
@@ -48,45 +49,71 @@ def gather(paths: Sequence[Path], site: Site, *, known: Container[str], progress
         If the archive cannot be written.
     """
     files = list(files_below(paths))
-    archive, cache, wanted = Archive(site.archive), DatasetCache(), wanted_keywords(site)
-    held: list[Held] = []
-    found: dict[tuple[str, str, str], list[FileHeader]] = {}
-    taken: set[str] = set()
-    by_uid: dict[str, str] = {}
-    duplicates = 0
+    taking = _Taking(site, known)
     with quiet_pydicom():
         for number, path in enumerate(files):
             if progress and number % 16 == 0:
                 progress("reading files", number, len(files))
-            content = _content(path)
-            if isinstance(content, Held):
-                held.append(content)
-                continue
-            sha256 = content_hash(content)
-            if sha256 in taken or sha256 in known:
-                duplicates += 1
-                continue
-            one = read_file(content, str(path), sha256, wanted, site.timezone)
-            if isinstance(one, Held):
-                held.append(one)
-                continue
-            header, dataset = one
-            owner = identify(header, site)
-            if isinstance(owner, Held):
-                held.append(owner)
-                continue
-            if by_uid.setdefault(header.sop_instance_uid, sha256) != sha256:
-                held.append(hold(str(path), "same-uid-other-content", header.sop_instance_uid, sha256))
-                continue
-            taken.add(sha256)
-            archive.put(content, sha256)
-            cache.keep(sha256, len(content), dataset)
-            found.setdefault((header.study_uid, *owner), []).append(header)
-    archive.settle()
+            taking.take(path)
+    taking.archive.settle()
     if progress:
         progress("reading files", len(files), len(files))
-    sessions = tuple(_session(*key, headers, site, cache) for key, headers in found.items())
-    return Intake(sessions, tuple(held), len(files), duplicates)
+    sessions = tuple(_session(*key, headers, site, taking.cache) for key, headers in taking.found.items())
+    return Intake(sessions, tuple(taking.held), len(files), taking.duplicates)
+
+
+class _Taking:
+    """One intake under way: every file that it is given ends in exactly one of `found`, `held` and `duplicates`."""
+
+    def __init__(self, site: Site, known: Container[str]) -> None:
+        self.site, self.known = site, known
+        self.archive, self.cache, self.wanted = Archive(site.archive), DatasetCache(), wanted_keywords(site)
+        self.found: dict[tuple[str, str, str], list[FileHeader]] = {}
+        self.held: list[Held] = []
+        self.duplicates = 0
+        self._taken: dict[str, str] = {}  # SOP Instance UID = content hash
+        self._hashes: set[str] = set()
+
+    def take(self, path: Path) -> None:
+        """Read one file and put it where it belongs."""
+        content = _content(path)
+        ended = content if isinstance(content, Held) else self._settle(content, str(path))
+        if ended is None:
+            self.duplicates += 1
+        elif isinstance(ended, Held):
+            self.held.append(ended)
+
+    def _settle(self, content: bytes, path: str) -> Held | FileHeader | None:
+        """What the file is: held, or a header now among `found`, or None for a duplicate."""
+        sha256 = content_hash(content)
+        if self._is_known(sha256):
+            return None
+        one = read_file(content, path, sha256, self.wanted, self.site.timezone)
+        if isinstance(one, Held):
+            return one
+        header, dataset = one
+        if header.personal:
+            kept = blanked(content, parse(content))
+            if kept is None:
+                return hold(path, "names-a-person", ", ".join(personal_keywords(dataset)), sha256)
+            content, sha256 = kept, content_hash(kept)
+            if self._is_known(sha256):
+                return None
+            header = replace(header, sha256=sha256)
+        owner = identify(header, self.site)
+        if isinstance(owner, Held):
+            return owner
+        if self._taken.get(header.sop_instance_uid, sha256) != sha256:
+            return hold(path, "same-uid-other-content", header.sop_instance_uid, sha256)
+        self._taken[header.sop_instance_uid] = sha256
+        self._hashes.add(sha256)
+        self.archive.put(content, sha256)
+        self.cache.keep(sha256, len(content), dataset)
+        self.found.setdefault((header.study_uid, *owner), []).append(header)
+        return header
+
+    def _is_known(self, sha256: str) -> bool:
+        return sha256 in self._hashes or sha256 in self.known
 
 
 def wanted_keywords(site: Site) -> tuple[str, ...]:
@@ -104,6 +131,12 @@ def identify(header: FileHeader, site: Site) -> tuple[str, str] | Held:
     if scanner is None:
         detail = f"add this to {target}, with a name of your own, and ingest the file again:\n{scanner_block(facts)}\n"
         return hold(header.path, "unknown-scanner", detail, header.sha256)
+    if phantom is None and header.personal:
+        detail = (
+            "it carries entries that may belong to a person, so nothing of them is shown or kept; "
+            f"if it is a phantom's, scan it without them, or add a [[phantom]] to {target} by hand"
+        )
+        return hold(header.path, "unknown-phantom", detail, header.sha256)
     if phantom is None:
         detail = f"add this to {target}, with its plate, and ingest the file again:\n{phantom_block(facts)}\n"
         return hold(header.path, "unknown-phantom", detail, header.sha256)
@@ -140,18 +173,25 @@ def session_from_archive(
 
 
 def merge(session: Session, earlier: Sequence[FileRecord], site: Site) -> Session:
-    """The session joined with what of its run came in before (read from the archive)."""
-    before, _ = session_from_archive(site, earlier, run=session.run)
+    """The session joined with what of its run came in before (read from the archive).
+
+    A newcomer that has the SOP Instance UID of an earlier file but other content is held, in `Session.held`: the
+    earlier one was measured, and one of the two was altered after the scan. So are files that the archive has lost.
+    """
+    before, lost = session_from_archive(site, earlier, run=session.run)
     if before is None:
-        return session
-    have = {header.sop_instance_uid for header in session.headers}
-    headers = [*session.headers, *(h for h in before.headers if h.sop_instance_uid not in have)]
+        return replace(session, held=lost)
+    have = {header.sop_instance_uid: header.sha256 for header in before.headers}
+    altered = [h for h in session.headers if have.get(h.sop_instance_uid, h.sha256) != h.sha256]
+    headers = [*before.headers, *(h for h in session.headers if h.sop_instance_uid not in have)]
     cache = session.cache or DatasetCache()
     for header in before.headers:
         dataset = before.cache.take(header.sha256) if before.cache else None
         if dataset is not None:
             cache.keep(header.sha256, header.size, dataset)
-    return _session(session.study_uid, session.scanner, session.phantom, headers, site, cache)
+    whole = _session(session.study_uid, session.scanner, session.phantom, headers, site, cache)
+    refused = [hold(h.path, "same-uid-other-content", h.sop_instance_uid, h.sha256) for h in altered]
+    return replace(whole, held=(*refused, *lost))
 
 
 def run_id(study_uid: str, scanner: str, phantom: str) -> str:
@@ -168,8 +208,14 @@ def _session(
     nominal_t = site.scanner(scanner).field_t
     remarks = []
     if any(header.personal for header in ordered):
-        text = "the files carry a name, birth date or other entry that may belong to a person; none of it was stored"
+        text = (
+            "the files carry a name, birth date or other entry that may belong to a person; "
+            "such entries were blanked in what is kept"
+        )
         remarks.append(Remark("personal-data", text))
+    if any(header.lossy for header in ordered):
+        text = "images were compressed with loss, which changes signals by unknown amounts: send them uncompressed"
+        remarks.append(Remark("lossy-compression", text, Consequence.WATCH))
     if stated_t is not None and abs(stated_t - nominal_t) > 0.1 * nominal_t:
         text = f"the files say {stated_t:g} T, site.toml says {nominal_t:g} T for this scanner"
         remarks.append(Remark("field-differs", text, Consequence.WATCH))

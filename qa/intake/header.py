@@ -9,18 +9,15 @@ from __future__ import annotations
 from collections.abc import Iterable, Mapping
 from dataclasses import dataclass
 from datetime import datetime, timedelta, timezone, tzinfo
-from math import isnan
+from math import hypot
 
 from pydicom.dataset import Dataset
 
+from qa.intake.claims import LOSSY, HeaderProblem, check_kind, check_size, is_enhanced, matrix_of, syntax_of
+from qa.intake.persons import personal_keywords
 from qa.intake.series import Component
 from qa.intake.values import NAN, anywhere, grouped, groups_of, number, numbers, text
 
-MR_CLASSES = {
-    "1.2.840.10008.5.1.4.1.1.4": "MR Image Storage",
-    "1.2.840.10008.5.1.4.1.1.4.1": "Enhanced MR Image Storage",
-    "1.2.840.10008.5.1.4.1.1.4.4": "Legacy Converted Enhanced MR Image Storage",
-}
 # Facts about equipment and protocol that may be kept; nothing here names a person.
 KEPT_FACTS = (
     "Manufacturer",
@@ -37,14 +34,6 @@ KEPT_FACTS = (
     "PulseSequenceName",
     "PixelBandwidth",
 )
-
-
-class HeaderProblem(Exception):  # noqa: N818  # never leaves this room: it carries a hold code to the file boundary
-    """A header that cannot be used."""
-
-    def __init__(self, code: str, detail: str = "") -> None:
-        super().__init__(code, detail)
-        self.code, self.detail = code, detail
 
 
 @dataclass(frozen=True, slots=True)
@@ -79,6 +68,7 @@ class FileHeader:
     facts: Mapping[str, str]  # non-personal
     wanted: Mapping[str, str]  # whatever the site's and the recipes' match tables ask for; not kept beyond intake
     personal: bool  # whether elements that name a person are filled
+    lossy: bool  # whether the pixels were ever compressed with loss
     frames: tuple[FrameHeader, ...]
 
 
@@ -90,30 +80,19 @@ def read_header(dataset: Dataset, path: str, sha256: str, size: int, wanted: Ite
     HeaderProblem
         With a code of `qa.intake.holds.CODES`.
     """
-    sop_class = text(dataset.get("SOPClassUID"))
-    modality = text(dataset.get("Modality"))
-    if sop_class not in MR_CLASSES or modality not in ("MR", ""):
-        raise HeaderProblem(
-            "not-mr-image", f"modality '{modality or 'not stated'}', SOP class {sop_class or 'not stated'}"
-        )
+    check_kind(dataset)
     uids = [text(dataset.get(k)) for k in ("SOPInstanceUID", "StudyInstanceUID", "SeriesInstanceUID")]
     if not all(uids):
         raise HeaderProblem("no-identity")
-    if number(dataset.get("SamplesPerPixel", 1)) != 1:
-        raise HeaderProblem("not-grey", f"{text(dataset.get('SamplesPerPixel'))} samples per pixel")
-    rows, columns = number(dataset.get("Rows")), number(dataset.get("Columns"))
-    if isnan(rows) or isnan(columns) or rows < 1 or columns < 1:
-        raise HeaderProblem("no-pixels", "no matrix size")
-    count = number(dataset.get("NumberOfFrames", 1))
-    if isnan(count) or not 1 <= count <= 100_000:
-        raise HeaderProblem("damaged", f"{text(dataset.get('NumberOfFrames'))!r} frames")
-    enhanced = "SharedFunctionalGroupsSequence" in dataset or "PerFrameFunctionalGroupsSequence" in dataset
-    if not enhanced and count != 1:
-        raise HeaderProblem("damaged", "several frames without functional groups")
+    rows, columns, count = matrix_of(dataset)
+    check_size(dataset, rows, columns, count)  # before a hundred thousand frames are looked for
     acquired = acquired_at(dataset, zone)
     if acquired is None:
         raise HeaderProblem("no-date")
-    frames = tuple(_enhanced_frame(dataset, i) for i in range(int(count))) if enhanced else (_classic_frame(dataset),)
+    if is_enhanced(dataset):
+        frames = tuple(_enhanced_frame(dataset, i) for i in range(count))
+    else:
+        frames = (_classic_frame(dataset),)
     return FileHeader(
         path=path,
         sha256=sha256,
@@ -122,11 +101,12 @@ def read_header(dataset: Dataset, path: str, sha256: str, size: int, wanted: Ite
         study_uid=uids[1],
         series_uid=uids[2],
         acquired=acquired,
-        rows=int(rows),
-        columns=int(columns),
+        rows=rows,
+        columns=columns,
         facts={k: v for k in KEPT_FACTS if (v := anywhere(dataset, k))},
         wanted={k: anywhere(dataset, k) for k in wanted},
-        personal=names_a_person(dataset),
+        personal=bool(personal_keywords(dataset)),
+        lossy=text(dataset.get("LossyImageCompression")) == "01" or str(syntax_of(dataset)) in LOSSY,
         frames=frames,
     )
 
@@ -194,10 +174,21 @@ def _frame(
         tr_ms=tr,
         flip_deg=number(flip),
         position_mm=numbers(position, 3) or (0.0, 0.0, 0.0),
-        directions=numbers(directions, 6) or (1.0, 0.0, 0.0, 0.0, 1.0, 0.0),
+        directions=_directions(directions),
         spacing_mm=size,
         slice_mm=number(thickness),
     )
+
+
+def _directions(value: object) -> tuple[float, ...]:
+    """Two unit vectors at right angles (PS3.3 C.7.6.2.1.1); an axial plane where the file does not give such."""
+    found = numbers(value, 6)
+    if found is not None:
+        along, down = found[:3], found[3:]
+        across = sum(a * b for a, b in zip(along, down, strict=True))
+        if abs(hypot(*along) - 1) < 0.01 and abs(hypot(*down) - 1) < 0.01 and abs(across) < 0.01:
+            return found
+    return (1.0, 0.0, 0.0, 0.0, 1.0, 0.0)
 
 
 def _time(value: object) -> float:
@@ -273,22 +264,3 @@ def _offset(written: str) -> timezone | None:
     if minutes > 14 * 60:
         return None
     return timezone(timedelta(minutes=-minutes if written[0] == "-" else minutes))
-
-
-_PERSONAL = (
-    "PatientBirthDate",
-    "PatientAddress",
-    "PatientTelephoneNumbers",
-    "OtherPatientNames",
-    "PatientMotherBirthName",
-    "PatientComments",
-    "OtherPatientIDs",
-)
-
-
-def names_a_person(dataset: Dataset) -> bool:
-    """Whether elements that belong to a person are filled: a name that is not the phantom's own id, a birth date…"""
-    name = text(dataset.get("PatientName")).replace("^", " ").strip()
-    own = {text(dataset.get(k)).strip().lower() for k in ("PatientID", "DeviceSerialNumber", "StudyID")}
-    named = bool(name) and name.lower() not in own and not any(w in name.lower() for w in ("phantom", "qa", "test"))
-    return named or any(text(dataset.get(keyword)) for keyword in _PERSONAL)

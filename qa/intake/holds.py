@@ -35,6 +35,10 @@ CODES: dict[str, tuple[str, str]] = {
         "has the SOP Instance UID of another file but other content",
         "Find out which of the two is the original; one of them was altered after the scan.",
     ),
+    "names-a-person": (
+        "carries entries that may belong to a person and cannot be blanked",
+        "Remove them and ingest it again: files are kept only without such entries.",
+    ),
     "unknown-scanner": ("comes from a scanner that site.toml does not know", ""),
     "unknown-phantom": ("shows a phantom that site.toml does not know", ""),
     "archive-lost": ("is missing from the archive or altered there", "Restore the archive folder from its backup."),

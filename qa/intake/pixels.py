@@ -1,4 +1,4 @@
-"""Pixels on one scale: decoded, checked for size before anything is allocated, and brought to linear units.
+"""Pixels on one scale: decoded, and brought to linear units.
 
 Three scales are known. Modality rescale: ``stored * slope + intercept`` (PS3.3 C.7.6.16.2.9, C.11.1). Real World Value
 Mapping, of stored values (PS3.3 C.7.6.16.2.11), where there is no rescale. And one vendor's private scale slope:
@@ -17,12 +17,20 @@ from pydicom.dataset import Dataset
 from pydicom.errors import InvalidDicomError
 from pydicom.uid import UID
 
-from qa.intake.header import HeaderProblem
-from qa.intake.values import grouped, groups_of, number, text
+from qa.intake.claims import HeaderProblem, syntax_of
+from qa.intake.values import grouped, groups_of, number
 from qa.words import Pixels
 
-LARGEST_FRAME = 4096 * 4096  # pixels
-LARGEST_FILE = 512 * 1024 * 1024  # decoded pixels of one file
+# What decodes the transfer syntaxes that Pillow and pydicom themselves do not (names of packages).
+DECODERS = {
+    "1.2.840.10008.1.2.4.57": "pylibjpeg pylibjpeg-libjpeg",  # JPEG lossless
+    "1.2.840.10008.1.2.4.70": "pylibjpeg pylibjpeg-libjpeg",  # JPEG lossless, first-order prediction
+    "1.2.840.10008.1.2.4.80": "pylibjpeg pylibjpeg-libjpeg",  # JPEG-LS
+    "1.2.840.10008.1.2.4.81": "pylibjpeg pylibjpeg-libjpeg",
+    "1.2.840.10008.1.2.4.201": "pylibjpeg pylibjpeg-openjpeg",  # high-throughput JPEG 2000
+    "1.2.840.10008.1.2.4.202": "pylibjpeg pylibjpeg-openjpeg",
+    "1.2.840.10008.1.2.4.203": "pylibjpeg pylibjpeg-openjpeg",
+}
 _PRIVATE_GROUP = 0x2005
 _PRIVATE_CREATOR = "MR IMAGING DD 001"  # how the name of the block's owner ends, in capitals
 _SCALE_SLOPE = 0x0E
@@ -49,43 +57,37 @@ FOREIGN_BYTES = (
 )
 
 
-def check_size(dataset: Dataset, rows: int, columns: int, frames: int) -> None:
-    """Compare what the header claims with the bytes that are there, before anything is allocated.
-
-    Raises
-    ------
-    HeaderProblem
-        "no-pixels", "too-large" or "truncated".
-    """
-    if "PixelData" not in dataset:
-        raise HeaderProblem("no-pixels")
-    allocated = number(dataset.get("BitsAllocated"))
-    if allocated not in (8, 16, 32):
-        raise HeaderProblem("damaged", f"{text(dataset.get('BitsAllocated'))!r} bits allocated per pixel")
-    pixels = rows * columns * frames
-    if rows * columns > LARGEST_FRAME or pixels > LARGEST_FILE:
-        raise HeaderProblem("too-large", f"{frames} frames of {rows} x {columns}")
-    syntax = UID(text(dataset.file_meta.get("TransferSyntaxUID"))) if hasattr(dataset, "file_meta") else UID("")
-    if syntax.is_valid and not syntax.is_private and syntax.is_transfer_syntax and syntax.is_compressed:
-        return
-    needed = pixels * int(allocated) // 8
-    found = len(dataset.PixelData)
-    if found < needed:
-        raise HeaderProblem("truncated", f"{found} bytes of pixel data where {needed} are needed")
-
-
 def decode(dataset: Dataset, frames: int) -> np.ndarray:
     """Stored values as (frames, rows, columns). Raises HeaderProblem "undecodable"."""
     try:
         stored = dataset.pixel_array
     except FOREIGN_BYTES as error:
-        detail = str(error).splitlines()[0][:200] if str(error) else type(error).__name__
-        raise HeaderProblem("undecodable", detail) from error
+        raise HeaderProblem("undecodable", _missing(syntax_of(dataset)) or told(error)) from error
     if stored.ndim == 2:
         stored = stored[np.newaxis]
     if stored.ndim != 3 or len(stored) != frames:
         raise HeaderProblem("undecodable", f"the decoded pixels have the shape {stored.shape}")
     return np.asarray(stored)
+
+
+def _missing(syntax: UID) -> str:
+    """What to install where no decoder for a transfer syntax is there; empty where one is, or none exists."""
+    from pydicom.pixels.decoders.base import get_decoder  # only where decoding failed
+
+    try:
+        decoder = get_decoder(syntax)
+    except NotImplementedError:
+        return f"{syntax.name} is a transfer syntax for which there is no decoder"
+    if decoder.is_available:
+        return ""
+    needed = DECODERS.get(str(syntax), "pylibjpeg pylibjpeg-libjpeg pylibjpeg-openjpeg")
+    return f"no decoder for {syntax.name} is installed; install one with 'pip install {needed}'"
+
+
+def told(error: Exception) -> str:
+    """The first line of what an error says, short; else its name."""
+    lines = str(error).strip().splitlines()
+    return lines[0][:200] if lines else type(error).__name__
 
 
 def scale_of(dataset: Dataset, frame: int) -> tuple[str, float, float]:
@@ -116,8 +118,12 @@ def scale_of(dataset: Dataset, frame: int) -> tuple[str, float, float]:
 
 
 def scaled(stored: np.ndarray, slope: float, intercept: float) -> Pixels:
-    """One frame as float32 in comparable units."""
-    return np.asarray(stored, dtype=np.float32) * np.float32(slope) + np.float32(intercept)
+    """One frame as float32 in comparable units. Raises HeaderProblem "damaged" where the scale leaves no number."""
+    with np.errstate(over="ignore", invalid="ignore"):
+        values: Pixels = np.asarray(stored, dtype=np.float32) * np.float32(slope) + np.float32(intercept)
+    if not np.isfinite(values).all():
+        raise HeaderProblem("damaged", f"with slope {slope:g} and intercept {intercept:g} pixels are no numbers")
+    return values
 
 
 def _either(first: object, second: object) -> float:

@@ -12,9 +12,10 @@ from datetime import tzinfo
 import pydicom
 from pydicom.dataset import Dataset
 
-from qa.intake.header import FileHeader, HeaderProblem, read_header
+from qa.intake.claims import HeaderProblem, check_inflated
+from qa.intake.header import FileHeader, read_header
 from qa.intake.holds import hold
-from qa.intake.pixels import FOREIGN_BYTES, check_size
+from qa.intake.pixels import FOREIGN_BYTES, told
 from qa.intake.series import Held
 
 CACHE_BYTES = 256 * 1024 * 1024
@@ -69,7 +70,12 @@ def looks_like_dicom(head: bytes) -> bool:
 
 
 def parse(content: bytes) -> Dataset:
-    """Parse without reading meaning into it. Raises one of FOREIGN_BYTES on bytes that are no DICOM."""
+    """Parse without reading meaning into it.
+
+    Raises HeaderProblem "too-large" on a file that would inflate beyond reason, else one of FOREIGN_BYTES on bytes
+    that are no DICOM.
+    """
+    check_inflated(content)
     return pydicom.dcmread(io.BytesIO(content), force=content[128:132] != b"DICM")
 
 
@@ -80,10 +86,8 @@ def read_file(
     try:
         dataset = parse(content)
         header = read_header(dataset, path, sha256, len(content), wanted, zone)
-        check_size(dataset, header.rows, header.columns, len(header.frames))
     except HeaderProblem as problem:
         return hold(path, problem.code, problem.detail, sha256)
     except FOREIGN_BYTES as error:
-        detail = str(error).splitlines()[0][:200] if str(error) else type(error).__name__
-        return hold(path, "damaged", detail, sha256)
+        return hold(path, "damaged", told(error), sha256)
     return header, dataset

@@ -102,6 +102,7 @@ class Session:
     archive: Path | None = None  # where the originals lie, by hash
     headers: tuple[FileHeader, ...] = ()  # in the order of `files`
     cache: DatasetCache | None = None  # files parsed already
+    held: tuple[Held, ...] = ()  # files that `merge` refused beside what came in before
 
 
 Component = Literal["magnitude", "real", "imaginary", "phase"]
