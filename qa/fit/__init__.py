@@ -9,7 +9,7 @@ a magnitude.
 
 from __future__ import annotations
 
-# from qa.fit.echo_train import EchoTrain
+from qa.fit.echo_train import EchoTrain
 from qa.fit.estimate import Estimate, FitMethod, Signals, u_total_ms
 from qa.fit.multi_echo import MultiEcho
 from qa.fit.noise import expected_magnitude, noise_of_background, noise_of_regions
@@ -18,7 +18,7 @@ from qa.fit.recovery import Recovery
 METHODS: dict[str, FitMethod] = {
     "inversion-recovery": Recovery("inversion-recovery", inverted=True),
     "saturation-recovery": Recovery("saturation-recovery", inverted=False),
-    #    "spin-echo-train": EchoTrain(),
+    "spin-echo-train": EchoTrain(),
     "spin-echo-multi-te": MultiEcho(),
 }
 

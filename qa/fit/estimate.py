@@ -52,10 +52,25 @@ class Estimate:
 class FitMethod(Protocol):
     """One entry of the table `qa.fit.METHODS`; every entry goes through one contract test."""
 
-    name: str  # as recipes write it
-    version: str  # raised whenever the numbers may change: "1"
-    quantity: Quantity
-    min_samples: int
+    @property
+    def name(self) -> str:
+        """As recipes write it."""
+        ...
+
+    @property
+    def version(self) -> str:
+        """Raised whenever the numbers may change: "1"."""
+        ...
+
+    @property
+    def quantity(self) -> Quantity:
+        """What it measures."""
+        ...
+
+    @property
+    def min_samples(self) -> int:
+        """How many different times it needs."""
+        ...
 
     def fit(self, signals: Signals) -> Estimate:
         """Fit vial averages."""

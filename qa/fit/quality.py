@@ -49,7 +49,7 @@ COMMON: tuple[Check, ...] = (
     Check(
         "not-finite",
         State.VOID,
-        lambda f: ~np.isfinite(f.signals.values).all(axis=1),
+        lambda f: np.asarray(~np.isfinite(f.signals.values).all(axis=1)),
         lambda f, i: "the signal has values that are not finite numbers",
     ),
     Check(

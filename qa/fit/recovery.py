@@ -283,8 +283,8 @@ SATURATION: tuple[Check, ...] = (
         State.MARKED,
         lambda f: np.abs(f.traits["ratio"] - 1.0) > np.maximum(3.0 * f.traits["u_ratio"], 0.1),
         lambda f, i: (
-            f"{100 * (1.0 - f.traits['ratio'][i]):.0f} % of the magnetisation is there at TI = 0: the saturation is not "
-            "what the method assumes, though the three-parameter form allows for it"
+            f"{100 * (1.0 - f.traits['ratio'][i]):.0f} % of the magnetisation is there at TI = 0: the saturation is "
+            "not what the method assumes, though the three-parameter form allows for it"
         ),
     ),
 )

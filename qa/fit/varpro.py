@@ -96,7 +96,7 @@ def fit(
 def grid_search(values: Floats, phi: Floats) -> np.ndarray:
     """Index (n,) of the grid point with the least residual; `phi` (g, m, k) is the basis on the grid, all weights 1."""
     q = orthonormal(phi)
-    g, m, k = q.shape
+    g, _, k = q.shape
     explained = np.zeros((len(values), g))
     for j in range(k):
         explained += np.square(values @ q[:, :, j].T)
@@ -141,7 +141,11 @@ def refine(
         done[active[settled]] = True
         keep = ~settled & (damping[active] < 1e12)
         pick = (keep & better, keep & ~better)
-        state = tuple(np.concatenate([a[pick[0]], b[pick[1]]]) for a, b in zip(new, state, strict=True))
+        state = (
+            np.concatenate([new[0][pick[0]], state[0][pick[1]]]),
+            np.concatenate([new[1][pick[0]], state[1][pick[1]]]),
+            np.concatenate([new[2][pick[0]], state[2][pick[1]]]),
+        )
         active = np.concatenate([active[pick[0]], active[pick[1]]])
     return _finish(values, basis, theta, root, log_theta, done)
 
@@ -198,7 +202,7 @@ def orthonormal(phi: Floats) -> Floats:
 
 def _gram_schmidt(phi: Floats) -> tuple[Floats, Floats]:
     """Modified Gram-Schmidt, twice, over the few columns: q (r, m, k) and upper triangle (r, k, k)."""
-    r, m, k = phi.shape
+    r, _, k = phi.shape
     q, upper = np.array(phi, float), np.zeros((r, k, k))
     for j in range(k):
         column = q[:, :, j]

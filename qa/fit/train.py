@@ -1,0 +1,247 @@
+"""Echo trains of all vials of a run at once: T2 and M0 per vial; transmit field and slice profile shared by all.
+
+    S_v(k) = M_v sum_q w_q h_q E_k(alpha_q(b_v, c), T1_v, T2_v) / sin(alpha_q / 2)
+
+E_k is the phase graph's echo k, q runs over the share of the signal (`qa.fit.profiles`), b_v is a smooth transmit field
+over the plate, c the sizes of the profile's components, and h how much more a part of the slice has recovered within TR
+than the middle has. Shared parameters carry Gaussian priors, so what the echoes do not tell stays uncertain instead of
+going astray. The early echoes of all vials fix the shared parameters; each vial's later echoes fix its T2.
+
+References
+----------
+.. [1] Hennig J, J Magn Reson 78 (1988) 397-407 (echo amplitudes of a train with any refocusing angle).
+.. [2] Marquardt D W, J Soc Ind Appl Math 11 (1963) 431-441 (the descent).
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+
+import numpy as np
+
+from qa.fit.epg import echo_train
+from qa.fit.noise import expected_magnitude
+from qa.fit.profiles import Profiles
+from qa.words import Floats, Ints
+
+LEAST_ANGLE = 0.05  # radians; smaller angles give no signal, and are rounded up smoothly
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Train:
+    """What is known of a train before the fit; n vials, m echoes, s shared parameters (field first, then profile)."""
+
+    spacing_ms: float
+    echoes: Ints  # (m,), 1 for the first
+    t1_ms: Floats  # (n,)
+    tr_ms: float  # NaN: taken as long
+    noise: float  # of one voxel's channel; 0 where unknown or where the values are signed
+    field: Floats  # (n, f), smooth functions of place; transmit level = 1 + field @ their sizes
+    profiles: Profiles
+    prior_sd: Floats  # (s,), of shared parameters around 0
+    recovered: Floats | None = None  # (n, q), see `with_recovery`; None: the same everywhere
+
+    def shape(self, t2_ms: Floats, shared: Floats, t1_ms: Floats | None = None) -> tuple[Floats, Floats, Floats]:
+        """Amplitudes for M = 1.
+
+        Returns
+        -------
+        shape (n, m), by_log_t2 (n, m), by_shared (n, m, s)
+        """
+        t1 = self.t1_ms if t1_ms is None else t1_ms
+        fields = self.field.shape[1]
+        level = 1.0 + self.field @ shared[:fields]
+        angle, by_level, by_size, _ = self.profiles.at(level, shared[fields:])
+        n, q = angle.shape
+        angle, inside = _rounded(angle)
+        weight = self.profiles.weight * (np.ones((n, q)) if self.recovered is None else self.recovered)
+        amplitude, by_angle, by_t2 = echo_train(
+            angle.ravel(),
+            self.spacing_ms,
+            np.repeat(t1, q),
+            np.repeat(t2_ms, q),
+            int(self.echoes[-1]),
+            slopes=True,
+        )
+        kept = self.echoes - 1
+        amplitude, by_angle, by_t2 = (a[kept].reshape(-1, n, q) for a in (amplitude, by_angle, by_t2))
+        half = np.sin(angle / 2.0)
+        by_angle = (by_angle - amplitude * (0.5 / np.tan(angle / 2.0))) * (weight / half * inside)
+        amplitude, by_t2 = amplitude * (weight / half), by_t2 * (weight / half)
+        along_level = np.einsum("mnq,nq->nm", by_angle, by_level)
+        along_sizes = np.einsum("mnq,nkq->nmk", by_angle, by_size)
+        along_field = along_level[:, :, None] * self.field[:, None, :]
+        return (
+            amplitude.sum(axis=2).T,
+            by_t2.sum(axis=2).T,
+            np.concatenate([along_field, along_sizes], axis=2),
+        )
+
+
+def _rounded(angle: Floats) -> tuple[Floats, Floats]:
+    """Angles kept clear of zero, and the derivative of that."""
+    kept = np.sqrt(np.square(angle) + LEAST_ANGLE**2)
+    return kept, angle / kept
+
+
+def with_recovery(train: Train, shared: Floats) -> Train:
+    """The train with longitudinal magnetisation before each excitation in the steady state, over its mean.
+
+    What the pulses leave along the field and what regrows during the train is followed without its way through
+    transverse states, which is a small part of a small correction.
+    """
+    if not np.isfinite(train.tr_ms):
+        return train
+    fields = train.field.shape[1]
+    angle, _, _, excitation = train.profiles.at(1.0 + train.field @ shared[:fields], shared[fields:])
+    t1, echoes = train.t1_ms[:, None], train.echoes[-1]
+    rest = np.exp(-max(train.tr_ms - echoes * train.spacing_ms, 0.0) / t1)
+    once = np.cos(angle) * np.exp(-train.spacing_ms / t1)
+    left = once**echoes
+    grown = -np.expm1(-train.spacing_ms / t1) * (1.0 - left) / (1.0 - once)
+    start = (1.0 - rest + rest * grown) / (1.0 - rest * left * np.cos(excitation))
+    return replace(train, recovered=start / start.mean(axis=1, keepdims=True))
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Joint:
+    """The minimum: n vials, s shared parameters."""
+
+    t2_ms: Floats  # (n,)
+    m0: Floats  # (n,)
+    shared: Floats  # (s,)
+    fitted: Floats  # (n, m), expected magnitude
+    amplitude: Floats  # (n, m), without the noise floor
+    jacobian: Floats  # (n, m, 2 + s): ln T2, ln M0, shared
+    chi2: Floats  # (n,), weighted
+    converged: bool
+
+
+def fit_jointly(
+    values: Floats,
+    train: Train,
+    weights: Floats,
+    t2_ms: Floats,
+    shared: Floats,
+    *,
+    tolerance: float = 0.01,
+    most_steps: int = 30,
+) -> Joint:
+    """Minimise sum w (y - f)^2 + sum (shared / prior sd)^2 over all parameters.
+
+    Parameters
+    ----------
+    values, weights : (n, m); weights are 1 / variance
+    t2_ms, shared : where to start
+    tolerance : how far the sum may still be from its least, in units of the noise's variance
+    """
+    log_t2, shared = np.log(t2_ms), np.array(shared, float)
+    shape = train.shape(t2_ms, shared)[0]
+    log_m0 = np.log(np.maximum(_scale(values, shape, weights), 1e-12))
+    damping, converged, fall = 1e-3, False, np.inf
+    now = _evaluate(values, train, weights, log_t2, log_m0, shared)
+    for _ in range(most_steps):
+        step_t2, step_m0, step_shared, fall = _step(values, train, weights, now, damping)
+        trial = _evaluate(
+            values,
+            train,
+            weights,
+            log_t2 + np.clip(step_t2, -0.7, 0.7),
+            log_m0 + np.clip(step_m0, -0.7, 0.7),
+            shared + step_shared,
+        )
+        converged = fall < tolerance * (1.0 + 1e-3 * now.total)
+        if trial.total <= now.total:
+            log_t2, log_m0, shared = trial.log_t2, trial.log_m0, trial.shared
+            now, damping = trial, damping * 0.1
+        else:
+            damping *= 10.0
+        if converged or damping > 1e8:
+            break
+    return Joint(np.exp(log_t2), np.exp(log_m0), shared, now.fitted, now.amplitude, now.jacobian, now.chi2, converged)
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class _Point:
+    log_t2: Floats
+    log_m0: Floats
+    shared: Floats
+    fitted: Floats
+    amplitude: Floats
+    jacobian: Floats
+    chi2: Floats
+    total: float
+
+
+def _evaluate(values: Floats, train: Train, weights: Floats, log_t2: Floats, log_m0: Floats, shared: Floats) -> _Point:
+    shape, by_t2, by_shared = train.shape(np.exp(log_t2), shared)
+    m0 = np.exp(log_m0)[:, None]
+    fitted, slope = (
+        expected_magnitude(m0 * shape, train.noise) if train.noise > 0 else (m0 * shape, np.ones_like(shape))
+    )
+    scaled = slope * m0
+    jacobian = np.concatenate(
+        [(scaled * by_t2)[:, :, None], (scaled * shape)[:, :, None], scaled[:, :, None] * by_shared], axis=2
+    )
+    chi2 = np.einsum("nm,nm->n", weights, np.square(values - fitted))
+    total = float(chi2.sum() + np.sum(np.square(shared / train.prior_sd)))
+    return _Point(log_t2, log_m0, shared, fitted, m0 * shape, jacobian, chi2, total)
+
+
+def _step(
+    values: Floats, train: Train, weights: Floats, now: _Point, damping: float
+) -> tuple[Floats, Floats, Floats, float]:
+    """A damped Gauss-Newton step by the Schur complement of the vials' own parameters, and how far chi2 would fall."""
+    weighted = now.jacobian * weights[:, :, None]
+    gradient = np.einsum("nmp,nm->np", weighted, values - now.fitted)
+    normal = np.einsum("nmp,nmr->npr", weighted, now.jacobian)
+    prior = train.prior_sd**-2.0
+    own = normal[:, :2, :2] + damping * normal[:, :2, :2] * np.eye(2) + 1e-12 * np.eye(2)
+    inverse_own = np.linalg.inv(own)
+    across = normal[:, :2, 2:]
+    common = normal[:, 2:, 2:].sum(axis=0)
+    common = common + np.diag(damping * np.diag(common) + prior)
+    pull = gradient[:, 2:].sum(axis=0) - prior * now.shared
+    solved = inverse_own @ across
+    schur = common - np.einsum("nps,npr->sr", across, solved)
+    step_shared = np.linalg.solve(schur, pull - np.einsum("nps,np->s", solved, gradient[:, :2]))
+    step_own = np.einsum("npr,nr->np", inverse_own, gradient[:, :2]) - solved @ step_shared
+    fall = float(np.sum(step_own * gradient[:, :2]) + step_shared @ pull)
+    return step_own[:, 0], step_own[:, 1], step_shared, fall
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Spread:
+    """Covariances at the minimum."""
+
+    own: Floats  # (n, 2, 2), of ln T2 and ln M0 with the shared parameters held
+    through_shared: Floats  # (n,), variance of ln T2 that the shared parameters bring in
+    shared: Floats  # (s, s)
+
+
+def spread(found: Joint, train: Train, weights: Floats) -> Spread:
+    """Covariances from the normal equations and the priors."""
+    normal = np.einsum("nmp,nm,nmr->npr", found.jacobian, weights, found.jacobian)
+    own = np.linalg.inv(normal[:, :2, :2] + 1e-12 * np.eye(2))
+    solved = own @ normal[:, :2, 2:]
+    schur = (
+        normal[:, 2:, 2:].sum(axis=0)
+        + np.diag(train.prior_sd**-2.0)
+        - np.einsum("nps,npr->sr", normal[:, :2, 2:], solved)
+    )
+    shared = np.linalg.inv(schur)
+    return Spread(own, np.einsum("ns,sr,nr->n", solved[:, 0], shared, solved[:, 0]), shared)
+
+
+def moved_by(found: Joint, train: Train, weights: Floats, change: Floats) -> Floats:
+    """How far ln T2 (n,) moves when the model's amplitudes change by `change` (n, m): own echoes only."""
+    own = found.jacobian[:, :, :2]
+    normal = np.einsum("nmp,nm,nmr->npr", own, weights, own) + 1e-12 * np.eye(2)
+    pull = np.einsum("nmp,nm,nm->np", own, weights, change)
+    return np.asarray(-np.linalg.solve(normal, pull[:, :, None])[:, 0, 0])
+
+
+def _scale(values: Floats, shape: Floats, weights: Floats) -> Floats:
+    return np.asarray(
+        np.einsum("nm,nm,nm->n", weights, values, shape) / np.einsum("nm,nm,nm->n", weights, shape, shape)
+    )
