@@ -34,42 +34,32 @@ def echo_train(
     amplitude, by_angle, by_log_t2 : (m, r) each; signed; the derivatives (per radian, per unit of ln T2) are empty
         without `slopes`
     """
-    angle, t1, t2 = np.broadcast_arrays(np.asarray(angle_rad, float), t1_ms, t2_ms)
-    r = angle.size
-    pulse = _pulse(angle)
-    e2, half = np.exp(-spacing_ms / t2), np.exp(-0.5 * spacing_ms / t2)
-    e1 = np.exp(-spacing_ms / t1)
-    size = echoes // 2 + 2
-    state = np.zeros((3, size, r))  # F+, F-, Z before the pulse
-    state[0, 0] = half
-    amplitude = np.empty((echoes, r))
-    empty = np.empty((0, r))
-    if not slopes:
-        for j in range(echoes):
-            kept = min(j + 1, echoes - j, size - 1)
-            after = _apply(pulse, state[:, :kept])
-            amplitude[j] = after[1, 0] * half
-            _advance(state, after, kept, e1, e2)
-        return amplitude, empty, empty
-    turned = _pulse_slope(angle)
-    by_angle, by_t2 = np.empty((echoes, r)), np.empty((echoes, r))
-    moved, relaxed = np.zeros_like(state), np.zeros_like(state)
+    angle, t1, t2 = (np.ravel(a) for a in np.broadcast_arrays(np.asarray(angle_rad, float), t1_ms, t2_ms))
+    r, kinds = angle.size, 3 if slopes else 1
+    pulse, turned = _pulse(angle), _pulse_slope(angle)
     rate = spacing_ms / t2  # d e2 / d ln T2 = rate e2
-    relaxed[0, 0] = half * rate / 2.0
+    e1, e2, half = np.exp(-spacing_ms / t1), np.exp(-spacing_ms / t2), np.exp(-0.5 * spacing_ms / t2)
+    size = echoes // 2 + 2
+    state = np.zeros((3, kinds, size, r))  # F+, F-, Z before the pulse; the amplitude and its two derivatives
+    after, part, work = np.empty_like(state), np.empty((3, size, r)), np.empty((kinds, size, r))
+    state[0, 0, 0] = half
+    if slopes:
+        state[0, 2, 0] = half * rate / 2.0
+    found = np.empty((kinds, echoes, r))
     for j in range(echoes):
         kept = min(j + 1, echoes - j, size - 1)
-        before = state[:, :kept]
-        after = _apply(pulse, before)
-        after_moved = _apply(pulse, moved[:, :kept]) + _apply(turned, before)
-        after_relaxed = _apply(pulse, relaxed[:, :kept])
-        amplitude[j] = after[1, 0] * half
-        by_angle[j] = after_moved[1, 0] * half
-        by_t2[j] = (after_relaxed[1, 0] + after[1, 0] * (rate / 2.0)) * half
-        _advance(moved, after_moved, kept, e1, e2)
-        after_relaxed[:2] += after[:2] * rate
-        _advance(relaxed, after_relaxed, kept, e1, e2)
-        _advance(state, after, kept, e1, e2)
-    return amplitude, by_angle, by_t2
+        now = after[:, :, :kept]
+        _apply(pulse, state[:, :, :kept], now, work[:, :kept])
+        if slopes:
+            _apply(turned, state[:, 0, :kept], part[:, :kept], work[0, :kept])
+            now[:, 1] += part[:, :kept]
+        found[:, j] = now[1, :, 0] * half
+        if slopes:
+            found[2, j] += now[1, 0, 0] * (half * rate / 2.0)
+            np.multiply(now[:2, 0], rate, out=part[:2, :kept])
+            now[:2, 2] += part[:2, :kept]
+        _advance(state, now, kept, e1, e2)
+    return found[0], *(found[1:] if slopes else np.empty((2, 0, r)))
 
 
 def _pulse(angle: Floats) -> tuple[Floats, Floats, Floats, Floats]:
@@ -83,29 +73,30 @@ def _pulse_slope(angle: Floats) -> tuple[Floats, Floats, Floats, Floats]:
     return -sine / 2.0, sine / 2.0, np.cos(angle), -sine
 
 
-def _apply(pulse: tuple[Floats, Floats, Floats, Floats], state: Floats) -> Floats:
-    """Rotate (3, k, r) about the axis along which the magnetisation lies."""
+def _apply(pulse: tuple[Floats, Floats, Floats, Floats], state: Floats, after: Floats, work: Floats) -> None:
+    """Rotate (3, ..., r) about the axis along which the magnetisation lies, into `after`; `work` is (..., r)."""
     stay, swap, sine, cosine = pulse
     plus, minus, z = state
-    after = np.empty_like(state)
-    mixed = sine * z
-    np.multiply(stay, plus, out=after[0])
-    after[0] += swap * minus
-    after[0] += mixed
-    np.multiply(swap, plus, out=after[1])
-    after[1] += stay * minus
-    after[1] -= mixed
+    np.multiply(plus, stay, out=after[0])
+    np.multiply(minus, swap, out=work)
+    after[0] += work
+    np.multiply(plus, swap, out=after[1])
+    np.multiply(minus, stay, out=work)
+    after[1] += work
+    np.multiply(z, sine, out=work)
+    after[0] += work
+    after[1] -= work
     np.subtract(minus, plus, out=after[2])
     after[2] *= 0.5 * sine
-    after[2] += cosine * z
-    return after
+    np.multiply(z, cosine, out=work)
+    after[2] += work
 
 
 def _advance(state: Floats, after: Floats, kept: int, e1: Floats, e2: Floats) -> None:
     """Relax for one spacing and dephase by two units, from `after` (the first `kept` orders) into `state`."""
-    np.multiply(after[0], e2, out=state[0, 1 : kept + 1])
-    np.multiply(after[1, 0], e2, out=state[0, 0])  # order -1 passes the echo and becomes +1
-    np.multiply(after[1, 1:], e2, out=state[1, : kept - 1])
-    state[1, kept - 1 : kept + 1] = 0.0
-    np.multiply(after[2], e1, out=state[2, :kept])
-    state[2, kept : kept + 1] = 0.0
+    np.multiply(after[0], e2, out=state[0, :, 1 : kept + 1])
+    np.multiply(after[1, :, 0], e2, out=state[0, :, 0])  # order -1 passes the echo and becomes +1
+    np.multiply(after[1, :, 1:], e2, out=state[1, :, : kept - 1])
+    state[1, :, kept - 1 : kept + 1] = 0.0
+    np.multiply(after[2], e1, out=state[2, :, :kept])
+    state[2, :, kept : kept + 1] = 0.0
