@@ -18,7 +18,7 @@ MR_CLASSES = {
 LARGEST_FRAME = 4096 * 4096  # pixels
 LARGEST_FILE = 256 * 1024 * 1024  # pixels of one file, all frames
 MOST_FRAMES = 100_000
-LARGEST_RATIO = 1000  # decoded over compressed bytes: images with noise in them reach 20
+LARGEST_RATIO = 200  # decoded or inflated bytes over those in the file: images with noise in them reach 20
 FREE = 16 * 1024 * 1024  # bytes that may be decoded or inflated whatever the ratio
 LOSSY = frozenset(
     "1.2.840.10008.1.2.4." + end for end in ("50", "51", "81", "91", "93", "203")
