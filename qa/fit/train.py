@@ -114,6 +114,7 @@ class Joint:
     amplitude: Floats  # (n, m), without the noise floor
     jacobian: Floats  # (n, m, 2 + s): ln T2, ln M0, shared
     chi2: Floats  # (n,), weighted
+    total: float  # of chi2 and the priors
     converged: bool
 
 
@@ -158,7 +159,9 @@ def fit_jointly(
             damping *= 10.0
         if converged or damping > 1e8:
             break
-    return Joint(np.exp(log_t2), np.exp(log_m0), shared, now.fitted, now.amplitude, now.jacobian, now.chi2, converged)
+    return Joint(
+        np.exp(log_t2), np.exp(log_m0), shared, now.fitted, now.amplitude, now.jacobian, now.chi2, now.total, converged
+    )
 
 
 @dataclass(frozen=True, slots=True, eq=False)
