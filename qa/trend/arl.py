@@ -15,15 +15,23 @@ from scipy.special import gammaincinv, ndtr, ndtri, stdtrit
 from qa.words import Floats
 
 _NODES = 81  # one chart, to six digits
-_COARSE = 35  # averages over baselines, to three digits
+_COARSE = 61  # averages over baselines: dense enough for the kernel wherever the limit is near
+_FAR = 7.5  # a limit so many standard deviations of the EWMA away is never passed (and no quadrature could tell)
 
 
 def _normal(x: Floats) -> Floats:
-    return np.exp(-0.5 * x * x) / np.sqrt(2.0 * np.pi)
+    density: Floats = np.exp(-0.5 * x * x) / np.sqrt(2.0 * np.pi)
+    return density
+
+
+@lru_cache(maxsize=8)
+def _unit_legendre(count: int) -> tuple[Floats, Floats]:
+    nodes, weights = np.polynomial.legendre.leggauss(count)
+    return nodes, weights
 
 
 def _legendre(low: float, high: float, count: int = _NODES) -> tuple[Floats, Floats]:
-    nodes, weights = np.polynomial.legendre.leggauss(count)
+    nodes, weights = _unit_legendre(count)
     return 0.5 * (high - low) * (nodes + 1.0) + low, 0.5 * (high - low) * weights
 
 
@@ -51,7 +59,7 @@ def ewma_arl(weight: float, width: float, shift: float = 0.0) -> float:
 
 def _ewma_arls(weight: float, half: Floats, shift: Floats, count: int = _NODES) -> Floats:
     """Run lengths for many (limit, shift) pairs; `half` in sigmas of one value. Shapes (m,) -> (m,)."""
-    nodes, weights = np.polynomial.legendre.leggauss(count)
+    nodes, weights = _unit_legendre(count)
     x = half[:, None] * nodes  # (m, k)
     at = np.concatenate([x, np.zeros((half.size, 1))], axis=1)  # the last row is the start of the chart
     kernel = _normal((x[:, None, :] - (1.0 - weight) * at[:, :, None]) / weight - shift[:, None, None])
@@ -69,7 +77,8 @@ def _one_sided_cusum(slack: float, decision: float, shift: float, starts: Floats
     system[:, 1:] = w * _normal(x + slack - shift - states[:, None])
     solved = np.linalg.solve(np.eye(states.size) - system, np.ones(states.size))
     from_start = ndtr(slack - shift - starts) * solved[0]
-    return 1.0 + from_start + (w * _normal(x + slack - shift - starts[:, None])) @ solved[1:]
+    lengths: Floats = 1.0 + from_start + (w * _normal(x + slack - shift - starts[:, None])) @ solved[1:]
+    return lengths
 
 
 def cusum_arl(slack: float, decision: float, shift: float = 0.0, head_start: float = 0.0) -> float:
@@ -146,7 +155,10 @@ def ewma_signal_rate(weight: float, width: float, baseline_runs: float, freedom:
     error, ratio, probability = _baseline_could_be(baseline_runs, freedom)
     known = weight / (2.0 - weight)
     half = width * ratio * np.sqrt(known + (1.0 / baseline_runs if np.isfinite(baseline_runs) else 0.0))
-    return float(np.sum(probability / _ewma_arls(weight, half, -error, _COARSE)))
+    near = half - np.abs(error) < _FAR * np.sqrt(known)
+    if not near.any():
+        return 0.0
+    return float(np.sum(probability[near] / _ewma_arls(weight, half[near], -error[near], _COARSE)))
 
 
 @lru_cache(maxsize=1024)
@@ -166,12 +178,12 @@ def ewma_limit_estimated(
     -------
     The width to multiply with the standard deviation given in `ewma_signal_rate`.
     """
-    low, high = 0.5, 12.0
-    for _ in range(14):
-        middle = 0.5 * (low + high)
+    low, high = 0.3, 40.0
+    for _ in range(26):
+        middle = float(np.sqrt(low * high))
         too_often = ewma_signal_rate(weight, middle, baseline_runs, freedom) * arl > 1.0
         low, high = (middle, high) if too_often else (low, middle)
-    return 0.5 * (low + high)
+    return float(np.sqrt(low * high))
 
 
 def chance_limit(probability: float, freedom: float = float("inf")) -> float:

@@ -8,14 +8,14 @@ beyond a limit, a quarter to whole runs that lie apart from the run before.
 from __future__ import annotations
 
 from dataclasses import dataclass
-from functools import lru_cache
 
 import numpy as np
 
-from qa.trend.arl import chance_limit, ewma_limit_estimated
+from qa.trend.arl import chance_limit
 from qa.trend.charts import ewma_level, ewma_spread
 from qa.trend.levels import Chartable
 from qa.trend.streams import Bools
+from qa.trend.widths import width_of
 from qa.words import Floats
 
 WEIGHT = 0.2  # lambda of all smoothed charts: near the best for shifts of one sigma
@@ -64,17 +64,6 @@ class Smoothed:
 _GRID = (4.0, 6.0, 8.0, 12.0, 20.0, 40.0, 120.0, float("inf"))
 
 
-@lru_cache(maxsize=512)
-def _widths(arl: float, baseline_runs: float) -> tuple[float, ...]:
-    return tuple(ewma_limit_estimated(arl, WEIGHT, baseline_runs, freedom) for freedom in _GRID)
-
-
-def width(arl: float, baseline_runs: float, freedom: Floats) -> Floats:
-    """The chart's width for many degrees of freedom at once (interpolated in their inverse)."""
-    inverse = [0.0 if np.isinf(f) else 1.0 / f for f in _GRID]
-    return np.interp(1.0 / np.maximum(freedom, _GRID[0]), inverse[::-1], _widths(round(arl, 1), baseline_runs)[::-1])
-
-
 def smooth(series: Chartable, arl: float) -> Smoothed:
     """EWMA chart of a level (r,) or of residuals (r, S) whose baseline and scatter were estimated.
 
@@ -90,7 +79,7 @@ def smooth(series: Chartable, arl: float) -> Smoothed:
     widths = np.empty_like(level)
     for number in np.unique(runs):
         here = np.broadcast_to(runs == number, level.shape)
-        widths[here] = width(arl, float(number), np.broadcast_to(series.freedom, level.shape)[here])
+        widths[here] = width_of(arl, float(number), np.broadcast_to(series.freedom, level.shape)[here])
     limit = widths * spread
     side = np.sign(level)
     with np.errstate(invalid="ignore"):
@@ -107,4 +96,5 @@ def beyond_chance(probability: float, freedom: Floats) -> Floats:
     """The chance limit in sigmas for many degrees of freedom."""
     grid = np.array([chance_limit(probability, f) for f in _GRID])
     inverse = [0.0 if np.isinf(f) else 1.0 / f for f in _GRID]
-    return np.interp(1.0 / np.maximum(freedom, _GRID[0]), inverse[::-1], grid[::-1])
+    limit: Floats = np.interp(1.0 / np.maximum(freedom, _GRID[0]), inverse[::-1], grid[::-1])
+    return limit
