@@ -67,7 +67,7 @@ def load(session: Session, recipe: Recipe) -> Loaded:
             frames = _one_matrix(_timed(scan, frames, held), held)
             frames = _one_slice(scan, frames, remarks)
             frames = _decode_all(session, frames, decoded, held)
-            if frames:
+            if any(frame.head.component != "imaginary" for frame in frames):
                 series.append(_series(scan, frames, decoded))
     remarks += missing_scans(recipe, [one.scan.name for one in series])
     left = sorted(
@@ -98,17 +98,15 @@ def time_of(scan: Scan, frame: FrameHeader) -> float:
 
 
 def _signal_frames(scan: Scan, files: Sequence[FileHeader]) -> tuple[list[_Frame], list[Remark]]:
-    """Magnitude frames; real ones where there is no magnitude."""
+    """Magnitude frames; where there are none, real and imaginary ones together, or real ones alone."""
     frames = [_Frame(file, head) for file in files for head in file.frames]
-    for component in ("magnitude", "real"):
-        chosen = [frame for frame in frames if frame.head.component == component]
-        if chosen:
-            left = len(frames) - len(chosen)
-            note = Remark(
-                "frames-left-out", f"{left} frames of phase, other components or maps are not used", subject=scan.name
-            )
-            return chosen, [note] if left else []
-    return [], []
+    by_kind = {kind: [f for f in frames if f.head.component == kind] for kind in ("magnitude", "real", "imaginary")}
+    chosen = by_kind["magnitude"] or (by_kind["real"] + by_kind["imaginary"] if by_kind["real"] else [])
+    left = len(frames) - len(chosen)
+    if not chosen or not left:
+        return chosen, []
+    text = f"{left} frames of phase, other components or maps are not used"
+    return chosen, [Remark("frames-left-out", text, subject=scan.name)]
 
 
 def _timed(scan: Scan, frames: Sequence[_Frame], held: dict[str, Held]) -> list[_Frame]:
@@ -205,31 +203,21 @@ def _series(scan: Scan, frames: Sequence[_Frame], decoded: dict[str, _Decoded | 
     """One series from decoded frames: sorted by time, repeats averaged, checked against the recipe."""
     remarks: list[Remark] = []
     groups: dict[float, list[_Frame]] = {}
-    shortest_te = min((f.head.te_ms for f in frames if not isnan(f.head.te_ms)), default=float("nan"))
+    kept = [f.head.te_ms for f in frames if f.head.component != "imaginary" and not isnan(f.head.te_ms)]
+    shortest_te = min(kept, default=float("nan"))
     for frame in frames:
         second_echo = scan.quantity is Quantity.T1 and frame.head.te_ms > shortest_te + 0.5
         if not second_echo:
             groups.setdefault(round(time_of(scan, frame.head), 3), []).append(frame)
-    times = sorted(groups)
-    pixels, kinds = [], set()
-    for time in times:
-        members = [(decoded[f.file.sha256], f.head.index) for f in groups[time]]
-        same = [one.pixels[index] for one, index in members if one is not None]
-        kinds |= {one.kinds[index] for one, index in members if one is not None}
-        pixels.append(same[0] if len(same) == 1 else np.mean(same, axis=0, dtype=np.float32))
-    repeats = sum(len(group) - 1 for group in groups.values())
-    if repeats:
-        remarks.append(Remark("repeats-averaged", f"{repeats} repeated frames were averaged", subject=scan.name))
+    stack, times, kinds = _stacked(scan, groups, decoded, remarks)
     if "private" in kinds and len(kinds) > 1:
         text = f"scan '{scan.name}': some frames carry a private scale and some do not, so they are not on one scale"
         remarks.append(Remark("mixed-scale", text, Consequence.VOID, scan.name))
-    stack = np.stack(pixels).astype(np.float32, copy=False)
-    signed = frames[0].head.component == "real"
+    signed = frames[0].head.component == "real" and "magnitude-made" not in {remark.code for remark in remarks}
     if not signed and np.mean(stack < 0) > 0.01:
         signed = True
-        remarks.append(
-            Remark("negative-pixels", "called magnitude, but partly negative: taken as signed", subject=scan.name)
-        )
+        text = "called magnitude, but partly negative: taken as signed"
+        remarks.append(Remark("negative-pixels", text, subject=scan.name))
     firsts = [groups[time][0] for time in times]
     ti_ms = _column([time if scan.quantity is Quantity.T1 else firsts[i].head.ti_ms for i, time in enumerate(times)])
     te_ms, tr_ms = _column([f.head.te_ms for f in firsts]), _column([f.head.tr_ms for f in firsts])
@@ -261,6 +249,42 @@ def _series(scan: Scan, frames: Sequence[_Frame], decoded: dict[str, _Decoded | 
         facts=firsts[0].file.facts,
         remarks=tuple(replace(r, subject=r.subject or scan.name) for r in remarks),
     )
+
+
+def _stacked(
+    scan: Scan, groups: dict[float, list[_Frame]], decoded: dict[str, _Decoded | None], remarks: list[Remark]
+) -> tuple[Pixels, list[float], set[str]]:
+    """One image per time, in order; repeats are averaged, real and imaginary parts made into a magnitude."""
+    complex_parts = any({"real", "imaginary"} <= {f.head.component for f in group} for group in groups.values())
+    images: dict[float, Pixels] = {}
+    kinds: set[str] = set()
+    repeats, alone = 0, []
+    for time in sorted(groups):
+        parts: dict[str | None, list[Pixels]] = {}
+        for frame in groups[time]:
+            one = decoded[frame.file.sha256]
+            if one is not None:
+                parts.setdefault(frame.head.component, []).append(one.pixels[frame.head.index])
+                kinds.add(one.kinds[frame.head.index])
+        repeats += sum(len(same) - 1 for same in parts.values())
+        means = {kind: same[0] if len(same) == 1 else np.mean(same, axis=0) for kind, same in parts.items()}
+        if complex_parts and len(means) == 2:
+            images[time] = np.hypot(means["real"], means["imaginary"])
+        elif not complex_parts and "imaginary" not in means:
+            images[time] = next(iter(means.values()))
+        else:
+            alone.append(time)
+    if repeats:
+        remarks.append(Remark("repeats-averaged", f"{repeats} repeated frames were averaged", subject=scan.name))
+    if complex_parts:
+        text = "there is no magnitude: it was made of the real and imaginary parts"
+        remarks.append(Remark("magnitude-made", text, subject=scan.name))
+    if alone:
+        listed = ", ".join(f"{time:g}" for time in alone)
+        text = f"at {listed} ms only one of the real and imaginary parts is there; these times are not used"
+        remarks.append(Remark("part-missing", text, Consequence.WATCH, scan.name))
+    stack = np.stack([*images.values()]).astype(np.float32, copy=False)
+    return stack, [*images], kinds
 
 
 def _column(values: Sequence[float]) -> Floats:
