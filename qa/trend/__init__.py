@@ -14,8 +14,8 @@ from importlib import import_module
 from typing import Any
 
 _HOMES = {
-    "Judgement": "judging",
-    "StreamRow": "judging",
+    "Judgement": "judgements",
+    "StreamRow": "judgements",
     "judge": "judging",
     "Finding": "findings",
     "Forecast": "findings",

@@ -109,18 +109,12 @@ def _temperature(change: Change, course: Course) -> str | None:
     without = find_change(t[known], y[known] - per_k * x, sd[known])
     total = float(weight @ centred**2)
     by_temperature = per_k**2 * float(weight @ (x * x)) / total
-    part = _part(change, t[known])
+    part = change.at(t[known])
     rest = centred - (part - np.average(part, weights=weight))
     by_change = 1.0 - float(weight @ rest**2) / total
     if by_temperature > by_change and (without is None or without.chance > 0.01):
         return f"The level follows the phantom's temperature ({per_k:+.1f} % per kelvin left after correction)."
     return None
-
-
-def _part(change: Change, t: Floats) -> Floats:
-    if change.kind == "step":
-        return change.size * (t >= change.onset)
-    return change.rate * np.clip(t - change.onset, 0.0, None) / 365.25
 
 
 def why_vial(

@@ -70,7 +70,7 @@ def _segment(block: Block, first: int, last: int, since: np.datetime64 | None, b
     usable = np.isfinite(value)
     order = np.cumsum(usable, axis=0)
     used = usable & (order <= baseline_runs)
-    depth = int(used.any(axis=1).nonzero()[0][-1]) + 1 if used.any() else 0
+    depth = int(np.flatnonzero(used.any(axis=1)).max(initial=-1)) + 1
     learnt = np.where(used, value, np.nan)[:depth]
     packed = np.full((baseline_runs, value.shape[1]), np.nan)  # only the used readings, moved to the top
     rows, columns = np.nonzero(used)

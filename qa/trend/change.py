@@ -39,7 +39,12 @@ class Change:
     freedom: float
     chance: float  # probability that an unchanged series shows as much anywhere
     favour: float  # log likelihood of this kind over the other kind
-    contribution: Floats  # (n,) what it adds to each value
+
+    def at(self, t: Floats) -> Floats:
+        """What the change adds to values at times `t` (days), percent."""
+        if self.kind == "step":
+            return np.asarray(self.size * (t >= self.onset), dtype=np.float64)
+        return np.asarray(self.rate * np.clip(t - self.onset, 0.0, None) / YEAR, dtype=np.float64)
 
     def interval(self, level: float = 0.90) -> tuple[float, float]:
         """Interval of the size, given the onset."""
@@ -181,7 +186,6 @@ def find_change(t: Floats, y: Floats, sd: Floats, group: Ints | None = None) -> 
         freedom,
         chance,
         favour,
-        x[:, 0] * size,
     )
 
 
@@ -252,14 +256,14 @@ def find_changes(
         found.append(change)
         if len(found) > 1:
             found = _refined(found, t, y, sd, group, alpha)
-        rest = y - np.sum([c.contribution for c in found], axis=0)
+        rest = y - np.sum([c.at(t) for c in found], axis=0)
     return tuple(sorted(found, key=lambda c: c.onset))
 
 
 def _refined(found: list[Change], t: Floats, y: Floats, sd: Floats, group: Ints | None, alpha: float) -> list[Change]:
     for _ in range(2):
         for place in range(len(found)):
-            others = [c.contribution for number, c in enumerate(found) if number != place]
+            others = [c.at(t) for number, c in enumerate(found) if number != place]
             again = find_change(t, y - np.sum(others, axis=0), sd, group)
             if again is not None and again.chance <= alpha:
                 found[place] = again

@@ -18,7 +18,7 @@ from qa.trend.attribute import ask, why_level, why_vial
 from qa.trend.baseline import Segment, segments
 from qa.trend.budget import Promise
 from qa.trend.change import Change, find_change, find_changes
-from qa.trend.findings import Cause, Finding, FindingState, NearEntry, day_of, key, rate_interval
+from qa.trend.findings import Cause, Finding, FindingState, day_of, key, rate_interval
 from qa.trend.forecast import forecast
 from qa.trend.levels import FEWEST_VIALS, lanes
 from qa.trend.logbook import near
@@ -27,6 +27,7 @@ from qa.trend.sentences import quantity_name
 from qa.trend.single import limit_findings, restart_findings, run_findings, spread_findings
 from qa.trend.streams import Ints, blocks, natural, restarts
 from qa.trend.summary import StreamSummary, levels_frame, summaries
+from qa.trend.telling import events, sentence, shape
 from qa.words import Floats, Quantity, Verdict
 
 if TYPE_CHECKING:
@@ -169,7 +170,7 @@ class _Finder:
             findings += self._vial_change(label, change, family, rest, several)
         if several:  # in one scanner only
             for course in family:
-                series = rest[id(course)] - np.sum([course.contribution(c) for c in course.aged.get(label, [])], axis=0)
+                series = rest[id(course)] - np.sum([c.at(course.days) for c in course.aged.get(label, [])], axis=0)
                 for change in _changes([course], {id(course): series}, self.vial_alpha):
                     findings += self._vial_change(label, change, family, {**rest, id(course): series}, several, course)
         return findings
@@ -209,9 +210,9 @@ class _Finder:
         for course in self.courses:
             here = np.isfinite(course.level) & ~course.wild_run
             alpha = self.level_alpha
-            for change in find_changes(course.days[here], course.level[here], course.level_sd[here], alpha=alpha):
-                if abs(change.size) >= RELEVANT * self._limits(course, course.labels)[0]:
-                    found.append((change, course))
+            least = RELEVANT * self._limits(course, course.labels)[0]
+            changes = find_changes(course.days[here], course.level[here], course.level_sd[here], alpha=alpha)
+            found += [(change, course) for change in changes if abs(change.size) >= least]
         findings: list[Finding] = []
         taken: set[int] = set()
         found.sort(key=lambda pair: pair[0].chance)
@@ -301,12 +302,12 @@ class _Finder:
             change.rate if change.kind == "slope" else None,
             rate_interval(change),
             cause,
-            (*reasons, *_shape(change), *_events(entries)),
+            (*reasons, *shape(change), *events(entries)),
             entries,
             coming,
             self._first_raised(change, where, labels),
             state,
-            _sentence(name, subject, scanners, change, onset, interval),
+            sentence(name, subject, scanners, change, onset, interval),
         )
 
     def _number(self, course: Course, change: Change) -> int:
@@ -370,37 +371,3 @@ def _changes(family: Sequence[Course], series: dict[int, Floats], alpha: float) 
         return ()
     groups: Ints = np.concatenate(group)
     return find_changes(np.concatenate(t), np.concatenate(y), np.concatenate(sd), groups, alpha=alpha)
-
-
-def _shape(change: Change) -> tuple[str, ...]:
-    other = "slope" if change.kind == "step" else "step"
-    if not np.isfinite(change.favour):
-        return ()
-    if change.favour < 1.5:
-        return (f"A {other} would fit nearly as well.",)
-    return (f"A {change.kind} fits better than a {other} (likelihood ratio {_ratio(change.favour)}).",)
-
-
-def _ratio(favour: float) -> str:
-    return f"{np.exp(favour):.0f} to 1" if favour < 6.9 else "above 1000 to 1"
-
-
-def _events(entries: Sequence[NearEntry]) -> tuple[str, ...]:
-    return tuple(f"Near the onset, {e.at.date().isoformat()}: {e.kind}: {e.text}" for e in entries)
-
-
-def _sentence(
-    name: str, subject: str, scanners: tuple[str, ...], change: Change, onset: date, interval: tuple[date, date]
-) -> str:
-    places = " and ".join(scanners)
-    low, high = sorted(change.interval())
-    if change.kind == "slope":
-        rate = rate_interval(change) or (float("nan"), float("nan"))
-        return (
-            f"{name} of {subject} on {places} has drifted by {change.rate:+.1f} % a year ({rate[0]:+.1f} to "
-            f"{rate[1]:+.1f}) since about {onset}, {change.size:+.1f} % in all."
-        )
-    return (
-        f"{name} of {subject} on {places} stepped by {change.size:+.1f} % ({low:+.1f} to {high:+.1f}) by {onset} "
-        f"(between {interval[0]} and {interval[1]})."
-    )

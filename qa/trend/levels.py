@@ -12,7 +12,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from qa.trend.baseline import LOSS, Segment, _nanmedian
-from qa.trend.streams import Ints
+from qa.trend.streams import Bools, Ints
 from qa.words import Floats
 
 FEWEST_VIALS = 4  # with fewer, one vial could pull the level: then each vial is charted as it is
@@ -73,7 +73,7 @@ def common_level(percent: Floats, sd: Floats) -> Floats:
     return np.where(enough, level, np.nan)
 
 
-def _window_variance(values: Floats, mask: Floats) -> tuple[Floats, Floats]:
+def _window_variance(values: Floats, mask: Bools) -> tuple[Floats, Floats]:
     """Mean square about the mean within the mask, one wild value left out, and its degrees of freedom; (S,) each."""
     x = np.where(mask, values, np.nan)
     middle = _nanmedian(x)
@@ -86,7 +86,7 @@ def _window_variance(values: Floats, mask: Floats) -> tuple[Floats, Floats]:
     return np.where(freedom > 0, square / np.maximum(freedom, 1.0), np.nan), freedom
 
 
-def _later_variance(values: Floats, judged: Floats, clip: Floats) -> tuple[Floats, Floats]:
+def _later_variance(values: Floats, judged: Bools, clip: Floats) -> tuple[Floats, Floats]:
     """Half the squared successive differences known before each run: sum and degrees of freedom, (r, S) each.
 
     Differences see scatter but hardly a drift or step (von Neumann 1941, Ann. Math. Stat. 12, 367-395); each is
@@ -149,13 +149,14 @@ def _lane(segment: Segment, scan: str, quantity: str, columns: Ints) -> Lane:
     )
 
 
-def _masked_mean(values: Floats, mask: Floats) -> Floats:
+def _masked_mean(values: Floats, mask: Bools) -> Floats:
     there = mask & np.isfinite(values)
     number = there.sum(axis=0)
-    return np.where(there, values, 0.0).sum(axis=0) / np.where(number > 0, number, np.nan)
+    mean: Floats = np.where(there, values, 0.0).sum(axis=0) / np.where(number > 0, number, np.nan)
+    return mean
 
 
-def _level_chart(level: Floats, known: Floats, variance: Floats, excess: Floats) -> Chartable:
+def _level_chart(level: Floats, known: Bools, variance: Floats, excess: Floats) -> Chartable:
     half = known.sum(axis=1) * 2 >= known.shape[1]
     start = int(half.argmax()) if half.any() else len(level)
     window = (np.arange(len(level)) < start) & np.isfinite(level)

@@ -51,7 +51,7 @@ def log_entries_from_runs(runs: pd.DataFrame) -> list[ReadEntry]:
                 if before and now != before:
                     instant = pd.Timestamp(when).tz_localize("UTC").to_pydatetime()
                     text = f"{kind.capitalize()} changed from {before} to {now} (read from the images)."
-                    found.append(ReadEntry(kind, instant, str(scanner), text, str(run)))  # type: ignore[arg-type]
+                    found.append(ReadEntry(kind, instant, str(scanner), text, str(run)))
                 before = now
     return sorted(found, key=lambda entry: (entry.at, entry.scanner, entry.kind))
 

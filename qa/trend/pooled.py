@@ -58,24 +58,19 @@ class Course:
                 [np.median(row[np.isfinite(row)]) if np.isfinite(row).any() else 0.0 for row in stated**2 - typical**2]
             )
         wide = np.where(excess > 0.1 * float(np.nanmedian(typical)) ** 2, np.clip(excess, 0.0, None), 0.0)
-        return np.sqrt(np.maximum(own, usual) ** 2 + wide)
+        u: Floats = np.sqrt(np.maximum(own, usual) ** 2 + wide)
+        return u
 
     def relevel(self) -> None:
         """Works the level out again without the vials that were found to move by themselves."""
         percent = self.percent.copy()
         for label, changes in self.aged.items():
             column = self.labels.index(label)
-            percent[:, column] = percent[:, column] - np.sum([self.contribution(c) for c in changes], axis=0)
+            percent[:, column] = percent[:, column] - np.sum([c.at(self.days) for c in changes], axis=0)
         self.level = common_level(percent, self.sd)
         self.level = self.level - _start(self.level, self.segment)
         if len(self.labels) >= FEWEST_VIALS:
             self.own = self.percent - self.level[:, None]
-
-    def contribution(self, change: Change) -> Floats:
-        """What a change adds to each run of this course, percent."""
-        if change.kind == "step":
-            return change.size * (self.days >= change.onset)
-        return change.rate * np.clip(self.days - change.onset, 0.0, None) / 365.25
 
 
 def _start(level: Floats, segment: Segment) -> float:

@@ -45,3 +45,10 @@ def capital(sentence: str) -> str:
 def quantity_name(quantity: str, scan: str, several: bool) -> str:
     """'T1', or 'T2 (T2 train)' where several scans measure that quantity."""
     return f"{quantity} ({scan})" if several else quantity
+
+
+def counted(acting: int, watching: int, judged: int) -> str:
+    """'3 of 14 vials beyond the action limit', or what comes nearest to it."""
+    if acting:
+        return f"{acting} of {judged} vials beyond the action limit"
+    return f"{watching} of {judged} vials beyond the watch limit" if watching else f"{judged} vials together"

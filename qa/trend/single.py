@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from datetime import date
+from itertools import pairwise
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -133,8 +134,8 @@ def run_findings(course: Course, log: pd.DataFrame | None) -> list[Finding]:
         run = course.block.runs[course.segment.first + index]
         day = day_of(float(course.days[index]))
         sentence = (
-            f"{course.quantity} of all vials on {course.scanner} lies {percent(size)} from the runs around it on {day} only"
-            + (": repeat the run before concluding." if latest else "; the runs after it do not.")
+            f"{course.quantity} of all vials on {course.scanner} lies {percent(size)} from the runs around it "
+            f"on {day} only" + (": repeat the run before concluding." if latest else "; the runs after it do not.")
         )
         findings.append(
             _plain_finding(
@@ -159,7 +160,7 @@ def spread_findings(course: Course, log: pd.DataFrame | None) -> list[Finding]:
     """Scatter of the vials about the level that has plainly grown in the last runs."""
     own = course.own - np.sum(
         [
-            np.outer(course.contribution(c), np.array([label == name for name in course.labels], float))
+            np.outer(c.at(course.days), np.array([label == name for name in course.labels], float))
             for label, changes in course.aged.items()
             for c in changes
         ]
@@ -180,7 +181,10 @@ def spread_findings(course: Course, log: pd.DataFrame | None) -> list[Finding]:
     if chance > _CHANCE or ratio < 1.5:
         return []
     growth = float(np.sqrt(ratio))
-    sentence = f"{course.quantity} on {course.scanner} scatters {growth:.1f} times as much in the last {_RECENT} runs as before."
+    sentence = (
+        f"{course.quantity} on {course.scanner} scatters {growth:.1f} times as much in the last {_RECENT} runs "
+        "as before."
+    )
     return [
         _plain_finding(
             course,
@@ -200,7 +204,7 @@ def spread_findings(course: Course, log: pd.DataFrame | None) -> list[Finding]:
 def restart_findings(block: Block, stretches: tuple[Segment, ...], log: pd.DataFrame | None) -> list[Finding]:
     """Steps across restarts of the baseline: accepted by whoever restarted it, but never swallowed."""
     findings = []
-    for before, after in zip(stretches[:-1], stretches[1:], strict=True):
+    for before, after in pairwise(stretches):
         for scan, quantity, columns in block.scans:
             tail = before.percent[:, columns][-8:]
             count = np.isfinite(tail).sum(axis=0)
@@ -216,8 +220,8 @@ def restart_findings(block: Block, stretches: tuple[Segment, ...], log: pd.DataF
                 continue
             first, last = day_of(float(block.days[before.last - 1])), day_of(float(block.days[after.first]))
             sentence = (
-                f"{quantity} of all vials on {block.scanner} stepped by {percent(size, u)} across the restart of the baseline "
-                f"on {after.since.astype('datetime64[D]')}."
+                f"{quantity} of all vials on {block.scanner} stepped by {percent(size, u)} across the restart "
+                f"of the baseline on {after.since.astype('datetime64[D]')}."
             )
             entries = near(log, (block.scanner,), (block.phantom,), (first, last))
             findings.append(
