@@ -10,7 +10,8 @@ from contextlib import contextmanager
 from datetime import tzinfo
 
 import pydicom
-from pydicom.dataset import Dataset
+from pydicom.dataset import Dataset, FileDataset
+from pydicom.uid import ExplicitVRBigEndian, ExplicitVRLittleEndian, ImplicitVRLittleEndian
 
 from qa.intake.claims import HeaderProblem, check_inflated
 from qa.intake.header import FileHeader, read_header
@@ -69,14 +70,19 @@ def looks_like_dicom(head: bytes) -> bool:
     return explicit or int.from_bytes(head[4:8], "little") < 256
 
 
-def parse(content: bytes) -> Dataset:
+def parse(content: bytes) -> FileDataset:
     """Parse without reading meaning into it.
 
     Raises HeaderProblem "too-large" on a file that would inflate beyond reason, else one of FOREIGN_BYTES on bytes
     that are no DICOM.
     """
     check_inflated(content)
-    return pydicom.dcmread(io.BytesIO(content), force=content[128:132] != b"DICM")
+    dataset = pydicom.dcmread(io.BytesIO(content), force=content[128:132] != b"DICM")
+    if not dataset.file_meta.get("TransferSyntaxUID"):  # a bare dataset: as it was found to be encoded
+        implicit, little = dataset.original_encoding
+        explicit = ExplicitVRLittleEndian if little else ExplicitVRBigEndian
+        dataset.file_meta.TransferSyntaxUID = ImplicitVRLittleEndian if implicit else explicit
+    return dataset
 
 
 def read_file(
