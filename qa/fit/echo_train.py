@@ -69,7 +69,7 @@ class EchoTrain:
         """
         check_signals(signals, self.min_samples)
         values = usable(signals)
-        n, m = values.shape
+        n = len(values)
         times = np.asarray(signals.times_ms, float)
         spacing, echoes = echo_numbers(times)
         low, high = rate_range(times)
@@ -79,13 +79,12 @@ class EchoTrain:
         train = _train(signals, spacing, echoes, t1, 0.0 if signals.signed else noise)
         train, found, weights, reduced = _robust_fit(values, train, signals, start)
         size = spread(found, train, weights)
-        scale = residual_scale(reduced, m - 2) if noise > 0 else np.ones(n)
-        u = found.t2_ms * np.sqrt(size.own[:, 0, 0]) * scale
+        u = found.t2_ms * np.sqrt(size.own[:, 0, 0])
         u_model = found.t2_ms * np.hypot(np.sqrt(size.through_shared), _through_t1(found, train, weights, u_log_t1))
         level = 1.0 + train.field @ found.shared[: train.field.shape[1]]
         covariance = np.zeros((n, 3, 3))
         turn = np.stack([found.t2_ms, found.m0], axis=1)
-        covariance[:, :2, :2] = size.own * scale[:, None, None] ** 2 * turn[:, :, None] * turn[:, None, :]
+        covariance[:, :2, :2] = size.own * turn[:, :, None] * turn[:, None, :]
         covariance[:, 2, 2] = np.einsum(
             "nf,fg,ng->n", train.field, size.shared[: train.field.shape[1], : train.field.shape[1]], train.field
         )
@@ -195,7 +194,7 @@ def _weights(amplitude: Floats, signals: Signals) -> Floats:
 
 
 def _robust_fit(values: Floats, train: Train, signals: Signals, start: Floats) -> tuple[Train, Joint, Floats, Floats]:
-    """The joint fit, repeated with vials whose residuals exceed their noise counting less: the final weights too.
+    """The joint fit, repeated with weights by what the residuals turn out to be; also the final weights.
 
     Without known noise the residuals of each vial stand in for it.
     """
@@ -213,7 +212,7 @@ def _robust_fit(values: Floats, train: Train, signals: Signals, start: Floats) -
         reduced = np.einsum("nm,nm->n", plain, np.square(values - found.fitted)) / freedom
         if again == ROBUST_ROUNDS:
             break
-        excess = np.maximum(reduced, 1e-6) if not signals.noise > 0 else np.maximum(reduced, 1.0)
+        excess = np.maximum(reduced, 1e-6) if not signals.noise > 0 else residual_scale(reduced, freedom) ** 2
         weights = plain / excess[:, None]
     return train, found, weights, reduced
 

@@ -12,6 +12,7 @@ from qa.fit.estimate import Estimate, Signals
 from qa.words import Floats, Quantity, State
 
 MOST_RELATIVE_U = 0.12  # a reading less certain than this (k = 1, noise) is not determined
+ROWS_FOR_MEDIAN = 5  # fewer rows do not tell what is common to all
 FLOOR_OVER_NOISE = 3.0  # an averaged signal must reach this many voxel noises to be above the floor
 
 
@@ -137,15 +138,21 @@ def mean_sd(signals: Signals) -> Floats:
 
 
 def residual_scale(reduced_chi2: Floats, freedom: int) -> Floats:
-    """Factor (n,) on u: 1 while the residuals are what noise explains (95 % of cases), else sqrt(reduced chi2).
+    """Factor (n,) on u for residuals that are larger than the noise of one voxel explains.
 
-    The quantile of chi2 / freedom is Wilson and Hilferty's (Proc Natl Acad Sci 17 (1931) 684-688).
+    Neighbouring voxels share noise where images were filtered or interpolated, and their averages are noisier then than
+    their number suggests. All rows of a run show that alike, so it is taken from their median (never below 1). A row
+    whose own residuals exceed even that (95 % of cases do not) gets its own factor.
+
+    Quantiles of chi2 / freedom are Wilson and Hilferty's (Proc Natl Acad Sci 17 (1931) 684-688).
     """
     if freedom < 1:
         return np.ones_like(reduced_chi2)
     spread = 2.0 / (9.0 * freedom)
-    limit = (1.0 - spread + 1.645 * np.sqrt(spread)) ** 3
-    return np.where(reduced_chi2 > limit, np.sqrt(np.maximum(reduced_chi2, 0.0)), 1.0)
+    median, limit = (1.0 - spread) ** 3, (1.0 - spread + 1.645 * np.sqrt(spread)) ** 3
+    known = reduced_chi2[np.isfinite(reduced_chi2)]
+    common = max(1.0, float(np.median(known)) / median) if len(known) >= ROWS_FOR_MEDIAN else 1.0
+    return np.sqrt(np.where(reduced_chi2 > limit * common, np.maximum(reduced_chi2, 0.0), common))
 
 
 def conclude(
