@@ -1,4 +1,4 @@
-"""Repeatability and reproducibility from laboratories (here: scanners) with unequal numbers of results.
+"""Repeatability and reproducibility of one level from laboratories (here: scanners) with any numbers of results.
 
 References
 ----------
@@ -12,21 +12,22 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
-from scipy.special import btdtri, chdtri, fdtri, stdtrit
+from scipy.special import betaincinv, chdtri, fdtri, stdtrit
 
+from qa.compare.intervals import LEVEL, Interval, spread_interval, sum_interval
 from qa.words import Floats
 
-SMALLEST_CHANGE = 1.959963984540054 * np.sqrt(2.0)  # 2.77: two results differ by less in 95 % of pairs
+SMALLEST_CHANGE = 1.959963984540054 * float(np.sqrt(2.0))  # 2.77: two results differ by less in 95 % of pairs
 
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Precision:
-    """Variances of one level, in the unit of the results squared; `nbar` is the effective number per scanner."""
+    """Variances of one level, in the unit of the results squared; NaN where a part cannot be estimated."""
 
-    mean: float
+    mean: float  # over all results
     groups: int
     results: int
-    nbar: float
+    nbar: float  # effective number of results per scanner
     variance_repeatability: float  # s_r squared
     variance_between: float  # s_L squared, never below 0
     truncated: bool  # whether the between estimate was below 0
@@ -51,33 +52,31 @@ class Precision:
         """Degrees of freedom behind s_r."""
         return self.results - self.groups
 
-    def s_r_interval(self, level: float = 0.95) -> tuple[float, float]:
+    def s_r_interval(self, level: float = LEVEL) -> Interval | None:
         """Interval of s_r (chi square)."""
         return spread_interval(self.s_r, self.freedom_within, level)
 
-    def s_L_interval(self, level: float = 0.95) -> tuple[float, float]:  # noqa: N802
-        """Interval of s_L (Williams 1962, Biometrika 49, 278-281), exact F and chi square parts combined."""
+    def s_R_interval(self, level: float = LEVEL) -> Interval | None:  # noqa: N802
+        """Interval of s_R (modified large sample, on the two mean squares that make it up)."""
+        if self.groups < 2 or not np.isfinite(self.variance_between):
+            return None
+        between = self.variance_between + self.variance_repeatability / self.nbar
+        parts = [(between, self.groups - 1.0)]
+        if self.nbar > 1.0:
+            parts.append(((1.0 - 1.0 / self.nbar) * self.variance_repeatability, float(self.freedom_within)))
+        return sum_interval(parts, level)
+
+    def s_L_interval(self, level: float = LEVEL) -> Interval | None:  # noqa: N802
+        """Interval of s_L from exact F and chi square parts (Williams 1962, Biometrika 49, 278-281)."""
         p, within = self.groups, self.freedom_within
-        if p < 2 or within < 1 or self.variance_repeatability <= 0:
-            return (float("nan"), float("nan"))
-        between = self.nbar * self.variance_between + self.variance_repeatability
-        ratio = between / self.variance_repeatability
+        if p < 2 or within < 1 or not self.variance_repeatability > 0:
+            return None
+        ratio = (self.nbar * self.variance_between + self.variance_repeatability) / self.variance_repeatability
         tail = (1.0 - level) / 2.0
-        square = (p - 1.0) * self.variance_repeatability
-        low = square * (ratio - fdtri(p - 1, within, 1.0 - tail)) / (self.nbar * chdtri(p - 1, tail))
-        high = square * (ratio - fdtri(p - 1, within, tail)) / (self.nbar * chdtri(p - 1, 1.0 - tail))
+        square = (p - 1.0) * self.variance_repeatability / self.nbar
+        low = square * (ratio - fdtri(p - 1, within, 1.0 - tail)) / chdtri(p - 1, tail)
+        high = square * (ratio - fdtri(p - 1, within, tail)) / chdtri(p - 1, 1.0 - tail)
         return float(np.sqrt(max(low, 0.0))), float(np.sqrt(max(high, 0.0)))
-
-
-def spread_interval(s: float, freedom: float, level: float = 0.95) -> tuple[float, float]:
-    """Interval of a standard deviation from `freedom` degrees of freedom (chi square)."""
-    if freedom < 1:
-        return (float("nan"), float("nan"))
-    tail = (1.0 - level) / 2.0
-    return (
-        float(s * np.sqrt(freedom / chdtri(freedom, tail))),
-        float(s * np.sqrt(freedom / chdtri(freedom, 1.0 - tail))),
-    )
 
 
 def precision(groups: Sequence[Floats]) -> Precision:
@@ -94,7 +93,7 @@ def precision(groups: Sequence[Floats]) -> Precision:
     kept = [np.asarray(g, dtype=np.float64) for g in groups if len(g)]
     p = len(kept)
     counts = np.array([g.size for g in kept], dtype=np.float64)
-    total = counts.sum()
+    total = float(counts.sum())
     if not p:
         return Precision(float("nan"), 0, 0, float("nan"), float("nan"), float("nan"), False)
     means = np.array([g.mean() for g in kept])
@@ -113,50 +112,56 @@ def precision(groups: Sequence[Floats]) -> Precision:
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Consistency:
-    """Mandel's h (between) and k (within) for each scanner of one level, and their critical values."""
+    """Mandel's h (between) and k (within) for each scanner of one level, with their critical values; (p,) each.
+
+    NaN where a scanner has no result (h) or only one (k), or where the scanners are too few.
+    """
 
     h: Floats
     k: Floats
     h_critical_5: float
     h_critical_1: float
-    k_critical_5: float
-    k_critical_1: float
+    k_critical_5: Floats
+    k_critical_1: Floats
 
 
 def mandel(groups: Sequence[Floats]) -> Consistency:
-    """Mandel's consistency statistics of one level; k is NaN for a scanner with one result."""
+    """Mandel's consistency statistics of one level. `groups`: one array of results per scanner, may be empty."""
     means = np.array([np.mean(g) if len(g) else np.nan for g in groups])
+    freedom = np.array([max(len(g) - 1.0, 0.0) for g in groups])
     spreads = np.array([np.std(g, ddof=1) if len(g) > 1 else np.nan for g in groups])
-    counts = np.array([len(g) for g in groups], dtype=np.float64)
+    nothing = np.full(len(groups), np.nan)
     p = int(np.isfinite(means).sum())
-    spread_of_means = float(np.nanstd(means, ddof=1)) if p > 1 else float("nan")
-    h = (means - np.nanmean(means)) / spread_of_means if p > 1 and spread_of_means > 0 else np.full(len(groups), np.nan)
-    there = np.isfinite(spreads)
-    freedom = np.where(there, counts - 1.0, 0.0)
-    pooled = np.sqrt(np.sum(freedom * np.nan_to_num(spreads) ** 2) / max(freedom.sum(), 1.0))
-    k = spreads / pooled if pooled > 0 else np.full(len(groups), np.nan)
-    n = float(np.mean(counts[there])) if there.any() else float("nan")
+    spread_of_means = float(np.std(means[np.isfinite(means)], ddof=1)) if p > 1 else 0.0
+    h = (means - np.nanmean(means)) / spread_of_means if spread_of_means > 0 else nothing
+    total = float(freedom.sum())
+    pooled = float(np.sqrt(np.sum(freedom * np.nan_to_num(spreads) ** 2) / total)) if total > 0 else 0.0
+    k = spreads / pooled if pooled > 0 and (freedom > 0).sum() > 1 else nothing
     return Consistency(
-        h,
-        k,
-        h_critical(p, 0.05),
-        h_critical(p, 0.01),
-        k_critical(int(there.sum()), n, 0.05),
-        k_critical(int(there.sum()), n, 0.01),
+        h, k, h_critical(p, 0.05), h_critical(p, 0.01), k_critical(freedom, 0.05), k_critical(freedom, 0.01)
     )
 
 
 def h_critical(scanners: int, alpha: float) -> float:
-    """Critical value of h, two-sided at `alpha`: (p-1) t / sqrt(p (t^2 + p - 2)) with p - 2 degrees of freedom."""
+    """Critical value of h, two-sided at `alpha`; NaN for fewer than three scanners.
+
+    With t of p - 2 degrees of freedom: (p - 1) t / sqrt(p (t^2 + p - 2)).
+    """
     if scanners < 3:
         return float("nan")
     t = float(stdtrit(scanners - 2, 1.0 - alpha / 2.0))
     return float((scanners - 1) * t / np.sqrt(scanners * (t * t + scanners - 2)))
 
 
-def k_critical(scanners: int, results: float, alpha: float) -> float:
-    """Critical value of k, one-sided at `alpha`: sqrt(p F / (F + p - 1)), F with n-1 and (p-1)(n-1) degrees of freedom."""
-    if scanners < 2 or not results > 1:
-        return float("nan")
-    share = btdtri((results - 1) / 2.0, (scanners - 1) * (results - 1) / 2.0, 1.0 - alpha)  # k^2 / p is a beta variable
-    return float(np.sqrt(scanners * share))
+def k_critical(freedom: Floats, alpha: float) -> Floats:
+    """Critical values of k, one-sided at `alpha`, for scanners with these degrees of freedom; NaN where there are none.
+
+    A scanner's share of the pooled sum of squares is a beta variable, also with unequal numbers of results; with n
+    results each this is the standard's sqrt(p F / (F + p - 1)).
+    """
+    own = np.asarray(freedom, dtype=np.float64)
+    rest = own.sum() - own
+    usable = (own > 0) & (rest > 0)
+    safe_own, safe_rest = np.where(usable, own, 1.0), np.where(usable, rest, 1.0)
+    share = betaincinv(safe_own / 2.0, safe_rest / 2.0, 1.0 - alpha)
+    return np.where(usable, np.sqrt(own.sum() * share / safe_own), np.nan)

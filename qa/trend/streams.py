@@ -34,7 +34,7 @@ class Block:
 
     Shapes: runs R, streams S. `value` in ms at the reference temperature where that is known; `u` is its standard
     uncertainty in percent of the value; `deviation` is percent from the reference, `u_deviation` its standard
-    uncertainty with the reference's own; `plain` tells whether a number was expected but missing.
+    uncertainty with the reference's own; `reference_ms` and `u_reference_ms` are what `deviation` is from.
     """
 
     scanner: str
@@ -48,6 +48,8 @@ class Block:
     u: Floats  # (R, S)
     deviation: Floats  # (R, S)
     u_deviation: Floats  # (R, S)
+    reference_ms: Floats  # (R, S)
+    u_reference_ms: Floats  # (R, S)
     asked: Bools  # (R, S): the run has a row for this stream, with or without a number
 
     @property
@@ -62,24 +64,6 @@ class Block:
         for index, stream in enumerate(self.streams):
             names.setdefault((stream.scan, stream.quantity), []).append(index)
         return tuple((scan, quantity, np.array(where)) for (scan, quantity), where in names.items())
-
-    def upto(self, runs: int) -> Block:
-        """Only the first `runs` runs."""
-        cut = slice(0, runs)
-        return Block(
-            self.scanner,
-            self.phantom,
-            self.runs[cut],
-            self.acquired[cut],
-            self.void[cut],
-            self.celsius[cut],
-            self.streams,
-            self.value[cut],
-            self.u[cut],
-            self.deviation[cut],
-            self.u_deviation[cut],
-            self.asked[cut],
-        )
 
 
 def stamps(column: pd.Series) -> Stamps:
@@ -180,6 +164,8 @@ def _block(scanner: str, phantom: str, rows: pd.DataFrame) -> Block:
         matrix(u),
         matrix(deviation),
         matrix(u_deviation),
+        matrix(_column(rows, "reference_ms")),
+        matrix(_column(rows, "u_reference_ms")),
         asked,
     )
 
