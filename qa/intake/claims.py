@@ -8,7 +8,7 @@ from math import isnan
 from pydicom.dataset import Dataset
 from pydicom.uid import UID
 
-from qa.intake.values import number, text
+from qa.intake.values import number, text, value_of
 
 MR_CLASSES = {
     "1.2.840.10008.5.1.4.1.1.4": "MR Image Storage",
@@ -36,22 +36,22 @@ class HeaderProblem(Exception):  # noqa: N818  # never leaves this room: it carr
 
 def check_kind(dataset: Dataset) -> None:
     """Raises HeaderProblem "not-mr-image" or "not-grey"."""
-    sop_class, modality = text(dataset.get("SOPClassUID")), text(dataset.get("Modality"))
+    sop_class, modality = text(value_of(dataset, "SOPClassUID")), text(value_of(dataset, "Modality"))
     if sop_class not in MR_CLASSES or modality not in ("MR", ""):
         known = UID(sop_class).name if sop_class else "not stated"
         raise HeaderProblem("not-mr-image", f"modality '{modality or 'not stated'}', SOP class {known}")
-    if number(dataset.get("SamplesPerPixel", 1)) != 1:
-        raise HeaderProblem("not-grey", f"{text(dataset.get('SamplesPerPixel'))} samples per pixel")
+    if "SamplesPerPixel" in dataset and number(value_of(dataset, "SamplesPerPixel")) != 1:
+        raise HeaderProblem("not-grey", f"{text(value_of(dataset, 'SamplesPerPixel'))} samples per pixel")
 
 
 def matrix_of(dataset: Dataset) -> tuple[int, int, int]:
     """Rows, columns and number of frames. Raises HeaderProblem "no-pixels" or "damaged"."""
-    rows, columns = number(dataset.get("Rows")), number(dataset.get("Columns"))
+    rows, columns = number(value_of(dataset, "Rows")), number(value_of(dataset, "Columns"))
     if isnan(rows) or isnan(columns) or rows < 1 or columns < 1:
         raise HeaderProblem("no-pixels", "no matrix size")
-    count = number(dataset.get("NumberOfFrames", 1))
+    count = number(value_of(dataset, "NumberOfFrames")) if "NumberOfFrames" in dataset else 1.0
     if isnan(count) or not 1 <= count <= MOST_FRAMES or count % 1:
-        raise HeaderProblem("damaged", f"{text(dataset.get('NumberOfFrames'))!r} frames")
+        raise HeaderProblem("damaged", f"{text(value_of(dataset, 'NumberOfFrames'))!r} frames")
     if not is_enhanced(dataset) and count != 1:
         raise HeaderProblem("damaged", "several frames without functional groups")
     return int(rows), int(columns), int(count)
@@ -72,9 +72,9 @@ def check_size(dataset: Dataset, rows: int, columns: int, frames: int) -> None:
     """
     if "PixelData" not in dataset:
         raise HeaderProblem("no-pixels")
-    allocated = number(dataset.get("BitsAllocated"))
+    allocated = number(value_of(dataset, "BitsAllocated"))
     if allocated not in (8, 16, 32):
-        raise HeaderProblem("damaged", f"{text(dataset.get('BitsAllocated'))!r} bits allocated per pixel")
+        raise HeaderProblem("damaged", f"{text(value_of(dataset, 'BitsAllocated'))!r} bits allocated per pixel")
     pixels = rows * columns * frames
     if rows * columns > LARGEST_FRAME or pixels > LARGEST_FILE:
         raise HeaderProblem("too-large", f"{frames} frames of {rows} x {columns}")

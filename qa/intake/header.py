@@ -16,7 +16,7 @@ from pydicom.dataset import Dataset
 from qa.intake.claims import LOSSY, HeaderProblem, check_kind, check_size, is_enhanced, matrix_of, syntax_of
 from qa.intake.persons import personal_keywords
 from qa.intake.series import Component
-from qa.intake.values import NAN, anywhere, grouped, groups_of, number, numbers, text
+from qa.intake.values import NAN, anywhere, grouped, groups_of, listed, number, numbers, places_of, text, value_of
 
 # Facts about equipment and protocol that may be kept; nothing here names a person.
 KEPT_FACTS = (
@@ -81,7 +81,7 @@ def read_header(dataset: Dataset, path: str, sha256: str, size: int, wanted: Ite
         With a code of `qa.intake.holds.CODES`.
     """
     check_kind(dataset)
-    uids = [text(dataset.get(k)) for k in ("SOPInstanceUID", "StudyInstanceUID", "SeriesInstanceUID")]
+    uids = [text(value_of(dataset, k)) for k in ("SOPInstanceUID", "StudyInstanceUID", "SeriesInstanceUID")]
     if not all(uids):
         raise HeaderProblem("no-identity")
     rows, columns, count = matrix_of(dataset)
@@ -89,6 +89,7 @@ def read_header(dataset: Dataset, path: str, sha256: str, size: int, wanted: Ite
     acquired = acquired_at(dataset, zone)
     if acquired is None:
         raise HeaderProblem("no-date")
+    places = places_of(dataset)
     if is_enhanced(dataset):
         frames = tuple(_enhanced_frame(dataset, i) for i in range(count))
     else:
@@ -103,48 +104,48 @@ def read_header(dataset: Dataset, path: str, sha256: str, size: int, wanted: Ite
         acquired=acquired,
         rows=rows,
         columns=columns,
-        facts={k: v for k in KEPT_FACTS if (v := anywhere(dataset, k))},
-        wanted={k: anywhere(dataset, k) for k in wanted},
+        facts={k: v for k in KEPT_FACTS if (v := anywhere(places, k))},
+        wanted={k: anywhere(places, k) for k in wanted},
         personal=bool(personal_keywords(dataset)),
-        lossy=text(dataset.get("LossyImageCompression")) == "01" or str(syntax_of(dataset)) in LOSSY,
+        lossy=text(value_of(dataset, "LossyImageCompression")) == "01" or str(syntax_of(dataset)) in LOSSY,
         frames=frames,
     )
 
 
 def _classic_frame(dataset: Dataset) -> FrameHeader:
-    kinds = [text(item).upper() for item in _listed(dataset.get("ImageType"))]
+    kinds = [text(item).upper() for item in listed(value_of(dataset, "ImageType"))]
     return _frame(
         index=0,
-        component=_component(text(dataset.get("ComplexImageComponent")), kinds),
-        times=(dataset.get("InversionTime"), dataset.get("EchoTime"), dataset.get("RepetitionTime")),
-        flip=dataset.get("FlipAngle"),
+        component=_component(text(value_of(dataset, "ComplexImageComponent")), kinds),
+        times=(value_of(dataset, "InversionTime"), value_of(dataset, "EchoTime"), value_of(dataset, "RepetitionTime")),
+        flip=value_of(dataset, "FlipAngle"),
         geometry=(
-            dataset.get("ImagePositionPatient"),
-            dataset.get("ImageOrientationPatient"),
-            dataset.get("PixelSpacing"),
-            dataset.get("SliceThickness"),
+            value_of(dataset, "ImagePositionPatient"),
+            value_of(dataset, "ImageOrientationPatient"),
+            value_of(dataset, "PixelSpacing"),
+            value_of(dataset, "SliceThickness"),
         ),
     )
 
 
 def _enhanced_frame(dataset: Dataset, index: int) -> FrameHeader:
     groups = groups_of(dataset, index)
-    kind_items = grouped(groups, "MRImageFrameTypeSequence", "FrameType") or dataset.get("ImageType")
-    component = grouped(groups, "MRImageFrameTypeSequence", "ComplexImageComponent") or dataset.get(
-        "ComplexImageComponent"
+    kind_items = grouped(groups, "MRImageFrameTypeSequence", "FrameType") or value_of(dataset, "ImageType")
+    component = grouped(groups, "MRImageFrameTypeSequence", "ComplexImageComponent") or value_of(
+        dataset, "ComplexImageComponent"
     )
     te = grouped(groups, "MREchoSequence", "EffectiveEchoTime")
     ti = grouped(groups, "MRModifierSequence", "InversionTimes")
     timing = "MRTimingAndRelatedParametersSequence"
     return _frame(
         index=index,
-        component=_component(text(component), [text(item).upper() for item in _listed(kind_items)]),
+        component=_component(text(component), [text(item).upper() for item in listed(kind_items)]),
         times=(
-            ti if ti is not None else dataset.get("InversionTime"),
-            te if te is not None else dataset.get("EchoTime"),
-            _first(grouped(groups, timing, "RepetitionTime"), dataset.get("RepetitionTime")),
+            ti if ti is not None else value_of(dataset, "InversionTime"),
+            te if te is not None else value_of(dataset, "EchoTime"),
+            _first(grouped(groups, timing, "RepetitionTime"), value_of(dataset, "RepetitionTime")),
         ),
-        flip=_first(grouped(groups, timing, "FlipAngle"), dataset.get("FlipAngle")),
+        flip=_first(grouped(groups, timing, "FlipAngle"), value_of(dataset, "FlipAngle")),
         geometry=(
             grouped(groups, "PlanePositionSequence", "ImagePositionPatient"),
             grouped(groups, "PlaneOrientationSequence", "ImageOrientationPatient"),
@@ -200,12 +201,6 @@ def _first(*values: object) -> object:
     return next((value for value in values if value is not None), None)
 
 
-def _listed(value: object) -> list[object]:
-    if value is None:
-        return []
-    return [value] if isinstance(value, str) else list(value)  # type: ignore[call-overload]  # pydicom's MultiValue
-
-
 # ComplexImageComponent is the standard's word (PS3.3 C.8.13.3.1.2); value 3 and later of ImageType are the vendors'.
 _MARKS: dict[str, Component] = {"M": "magnitude", "P": "phase", "R": "real", "I": "imaginary"}
 _MAPS = ("T1 MAP", "T2 MAP", "T1_MAP", "T2_MAP", "R1_MAP", "R2_MAP", "B0 MAP", "B1 MAP", "ADC", "FIELD_MAP")
@@ -227,11 +222,11 @@ def _component(stated: str, kinds: list[str]) -> Component | None:
 
 def acquired_at(dataset: Dataset, zone: tzinfo) -> datetime | None:
     """When the data were acquired, aware: from the most particular date and time that the header has."""
-    own = _offset(text(dataset.get("TimezoneOffsetFromUTC"))) or zone
-    exact = _moment(text(dataset.get("AcquisitionDateTime")))
+    own = _offset(text(value_of(dataset, "TimezoneOffsetFromUTC"))) or zone
+    exact = _moment(text(value_of(dataset, "AcquisitionDateTime")))
     if exact is None:
         for name in ("Acquisition", "Series", "Study", "Content"):
-            exact = _moment(text(dataset.get(f"{name}Date")) + text(dataset.get(f"{name}Time")))
+            exact = _moment(text(value_of(dataset, f"{name}Date")) + text(value_of(dataset, f"{name}Time")))
             if exact is not None:
                 break
     if exact is None:

@@ -9,7 +9,7 @@ from pydicom.datadict import tag_for_keyword
 from pydicom.dataelem import RawDataElement
 from pydicom.dataset import Dataset
 
-from qa.intake.values import text
+from qa.intake.values import text, value_of
 
 _NAME = "PatientName"
 _OTHERS = (
@@ -30,10 +30,16 @@ _OF_A_PHANTOM = re.compile(r"\b(phantom\w*|qa|qc|test)\b", re.IGNORECASE)
 
 def personal_keywords(dataset: Dataset) -> list[str]:
     """Which elements that belong to a person are filled: a name that is not a phantom's, a birth date…"""
-    name = text(dataset.get(_NAME)).replace("^", " ").strip()
-    own = {text(dataset.get(k)).strip().lower() for k in ("PatientID", "DeviceSerialNumber", "StudyID")}
+    name = text(value_of(dataset, _NAME)).replace("^", " ").strip()
+    own = {text(value_of(dataset, k)).strip().lower() for k in ("PatientID", "DeviceSerialNumber", "StudyID")}
     named = bool(name) and name.lower() not in own and not _OF_A_PHANTOM.search(name)
-    return [_NAME] * named + [keyword for keyword in _OTHERS if dataset.get(keyword)]
+    return [_NAME] * named + [keyword for keyword in _OTHERS if filled(dataset, keyword)]
+
+
+def filled(dataset: Dataset, keyword: str) -> bool:
+    """Whether an element holds more than blanks."""
+    value = value_of(dataset, keyword)
+    return bool(value.strip(" \0") if isinstance(value, str) else value)
 
 
 def blanked(content: bytes, dataset: Dataset) -> bytes | None:

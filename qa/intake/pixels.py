@@ -14,11 +14,11 @@ from math import isnan
 
 import numpy as np
 from pydicom.dataset import Dataset
-from pydicom.errors import InvalidDicomError
+from pydicom.errors import BytesLengthException, InvalidDicomError
 from pydicom.uid import UID
 
 from qa.intake.claims import HeaderProblem, syntax_of
-from qa.intake.values import grouped, groups_of, number
+from qa.intake.values import grouped, groups_of, number, value_of
 from qa.words import Pixels
 
 # What decodes the transfer syntaxes that Pillow and pydicom themselves do not (names of packages).
@@ -31,6 +31,7 @@ DECODERS = {
     "1.2.840.10008.1.2.4.202": "pylibjpeg pylibjpeg-openjpeg",
     "1.2.840.10008.1.2.4.203": "pylibjpeg pylibjpeg-openjpeg",
 }
+_NATIVE = ("1.2.840.10008.1.2", "1.2.840.10008.1.2.1", "1.2.840.10008.1.2.1.99")  # uncompressed, little endian
 _PRIVATE_GROUP = 0x2005
 _PRIVATE_CREATOR = "MR IMAGING DD 001"  # how the name of the block's owner ends, in capitals
 _SCALE_SLOPE = 0x0E
@@ -42,6 +43,7 @@ FOREIGN_BYTES = (
     AttributeError,
     AssertionError,
     BufferError,
+    BytesLengthException,
     EOFError,
     InvalidDicomError,
     LookupError,
@@ -59,6 +61,9 @@ FOREIGN_BYTES = (
 
 def decode(dataset: Dataset, frames: int) -> np.ndarray:
     """Stored values as (frames, rows, columns). Raises HeaderProblem "undecodable"."""
+    plain = _plain(dataset, frames)
+    if plain is not None:
+        return plain
     try:
         stored = dataset.pixel_array
     except FOREIGN_BYTES as error:
@@ -68,6 +73,29 @@ def decode(dataset: Dataset, frames: int) -> np.ndarray:
     if stored.ndim != 3 or len(stored) != frames:
         raise HeaderProblem("undecodable", f"the decoded pixels have the shape {stored.shape}")
     return np.asarray(stored)
+
+
+def _plain(dataset: Dataset, frames: int) -> np.ndarray | None:
+    """Native little-endian pixels as they lie in the file, without a copy; None where they need more than that."""
+    if str(syntax_of(dataset)) not in _NATIVE:
+        return None
+    rows, columns = number(value_of(dataset, "Rows")), number(value_of(dataset, "Columns"))
+    bits, used = number(value_of(dataset, "BitsAllocated")), number(value_of(dataset, "BitsStored"))
+    kind = {0.0: "u", 1.0: "i"}.get(number(value_of(dataset, "PixelRepresentation")))
+    if (
+        kind is None
+        or bits not in (8, 16, 32)
+        or not 1 <= used <= bits
+        or number(value_of(dataset, "HighBit")) != used - 1
+    ):
+        return None
+    count = frames * int(rows) * int(columns)
+    stored = np.frombuffer(dataset.PixelData, np.dtype(f"<{kind}{int(bits) // 8}"), count)
+    if used < bits:  # unused bits may hold an overlay: pydicom takes it out
+        low, high = (0, 2**used - 1) if kind == "u" else (-(2 ** (used - 1)), 2 ** (used - 1) - 1)
+        if stored.min() < low or stored.max() > high:
+            return None
+    return stored.reshape(frames, int(rows), int(columns))
 
 
 def _missing(syntax: UID) -> str:
@@ -99,9 +127,11 @@ def scale_of(dataset: Dataset, frame: int) -> tuple[str, float, float]:
     slope, intercept : ``comparable = stored * slope + intercept``
     """
     groups = groups_of(dataset, frame)
-    slope = _either(grouped(groups, "PixelValueTransformationSequence", "RescaleSlope"), dataset.get("RescaleSlope"))
+    slope = _either(
+        grouped(groups, "PixelValueTransformationSequence", "RescaleSlope"), value_of(dataset, "RescaleSlope")
+    )
     intercept = _either(
-        grouped(groups, "PixelValueTransformationSequence", "RescaleIntercept"), dataset.get("RescaleIntercept")
+        grouped(groups, "PixelValueTransformationSequence", "RescaleIntercept"), value_of(dataset, "RescaleIntercept")
     )
     private = _scale_slope([*groups, dataset])
     if isnan(slope) or slope == 0:
@@ -133,9 +163,9 @@ def _either(first: object, second: object) -> float:
 
 def _real_world(places: list[Dataset]) -> tuple[float, float] | None:
     for place in places:
-        items = place.get("RealWorldValueMappingSequence")
+        items = value_of(place, "RealWorldValueMappingSequence")
         if items:
-            slope, intercept = (number(items[0].get(f"RealWorldValue{k}")) for k in ("Slope", "Intercept"))
+            slope, intercept = (number(value_of(items[0], f"RealWorldValue{k}")) for k in ("Slope", "Intercept"))
             if not isnan(slope) and slope != 0:
                 return slope, 0.0 if isnan(intercept) else intercept
     return None
@@ -158,4 +188,5 @@ def _items(place: Dataset) -> list[Dataset]:
     """Items of a frame's private sequences, one level down: where enhanced files keep such elements."""
     if "PixelData" in place:
         return []
-    return [item for element in place if element.VR == "SQ" and element.tag.is_private for item in element.value]
+    private = [place[tag] for tag in place.keys() if tag.is_private]  # noqa: SIM118  # converts none of the others
+    return [item for element in private if element.VR == "SQ" for item in element.value]

@@ -19,8 +19,15 @@ def archive(tmp_path):
     return Archive(tmp_path / "archive")
 
 
+def kept(archive, content):
+    """Put and brought to the disk; gives the name."""
+    name = archive.put(content)
+    archive.settle()
+    return name
+
+
 def test_content_comes_back_under_its_hash(archive):
-    name = archive.put(b"original")
+    name = kept(archive, b"original")
     assert name == hashlib.sha256(b"original").hexdigest()
     assert archive.read(name) == b"original"
     assert archive.path(name).parent.name == name[:2]
@@ -37,9 +44,9 @@ def test_any_content(tmp_path_factory, contents):
 
 
 def test_putting_twice_writes_once(archive):
-    name = archive.put(b"original")
+    name = kept(archive, b"original")
     before = archive.path(name).stat()
-    assert archive.put(b"original") == name
+    assert kept(archive, b"original") == name
     after = archive.path(name).stat()
     assert (before.st_ino, before.st_mtime_ns) == (after.st_ino, after.st_mtime_ns)
 
@@ -48,32 +55,43 @@ def test_a_half_written_file_of_an_earlier_crash_is_written_again(archive):
     name = content_hash(b"original")
     archive.path(name).parent.mkdir(parents=True)
     archive.path(name).write_bytes(b"orig")
-    archive.put(b"original")
+    kept(archive, b"original")
     assert archive.read(name) == b"original"
 
 
 def test_originals_cannot_be_written_to_by_accident(archive):
-    assert archive.path(archive.put(b"original")).stat().st_mode & 0o222 == 0
+    assert archive.path(kept(archive, b"original")).stat().st_mode & 0o222 == 0
 
 
-def test_settling_syncs_every_file_and_its_folder(archive, monkeypatch):
+def test_every_file_is_synced_before_it_has_its_name_and_every_folder_after(archive, monkeypatch):
+    done = []  # what happened, in order
+    real_sync, real_replace = os.fsync, os.replace
+
+    def sync(handle):
+        real_sync(handle)
+        done.append(("sync", os.readlink(f"/proc/self/fd/{handle}")))
+
+    def replace(aside, target):
+        done.append(("name", str(aside), str(target)))
+        real_replace(aside, target)
+
+    monkeypatch.setattr(os, "fsync", sync)
+    monkeypatch.setattr(os, "replace", replace)
     names = [archive.put(bytes([k]) * 50) for k in range(20)]
-    synced = []
-    real = os.fsync
-    monkeypatch.setattr(
-        os, "fsync", lambda handle: (synced.append(os.readlink(f"/proc/self/fd/{handle}")), real(handle))
-    )
     archive.settle()
-    paths = [str(archive.path(name)) for name in names]
-    assert set(synced) == set(paths) | {os.path.dirname(path) for path in paths}
-    assert len(synced) == len(set(synced))
-    synced.clear()
+    named = [entry for entry in done if entry[0] == "name"]
+    assert {entry[2] for entry in named} == {str(archive.path(name)) for name in names}
+    for entry in named:
+        assert done.index(("sync", entry[1])) < done.index(entry)
+        folder = ("sync", os.path.dirname(entry[2]))
+        assert done.index(folder) > done.index(entry)
+    done.clear()
     archive.settle()
-    assert synced == []
+    assert done == []
 
 
 def test_an_altered_original_is_noticed(archive):
-    name = archive.put(b"original")
+    name = kept(archive, b"original")
     archive.path(name).chmod(0o644)
     archive.path(name).write_bytes(b"0riginal")
     with pytest.raises(ArchiveError, match="altered") as caught:
@@ -90,7 +108,7 @@ def test_a_lost_original_is_noticed(archive):
 def test_an_archive_that_cannot_be_written_stops_the_intake(tmp_path):
     (tmp_path / "archive").write_text("a file where the folder should be")
     with pytest.raises(ArchiveError, match="cannot be") as caught:
-        Archive(tmp_path / "archive").put(b"original")
+        kept(Archive(tmp_path / "archive"), b"original")
     assert caught.value.exit_code == 3
 
 
@@ -100,9 +118,15 @@ def test_a_full_disk_leaves_no_half_file(archive, monkeypatch):
 
     monkeypatch.setattr(os, "replace", full)
     with pytest.raises(ArchiveError, match="No space left") as caught:
-        archive.put(b"original")
+        kept(archive, b"original")
     assert "nothing is lost" in str(caught.value)
     assert [path for path in archive.folder.rglob("*") if path.is_file()] == []
+
+
+def test_more_files_than_may_wait_in_memory(archive):
+    names = [archive.put(k.to_bytes(2, "big")) for k in range(300)]
+    archive.settle()
+    assert [archive.read(name) for name in names] == [k.to_bytes(2, "big") for k in range(300)]
 
 
 def test_two_at_once_put_the_same_content(archive):
@@ -110,9 +134,11 @@ def test_two_at_once_put_the_same_content(archive):
     errors = []
 
     def work():
+        own = Archive(archive.folder)
         try:
             for content in contents:
-                archive.put(content)
+                own.put(content)
+            own.settle()
         except ArchiveError as error:  # pragma: no cover
             errors.append(error)
 
