@@ -257,8 +257,11 @@ def _findings(found: Joint, train: Train, size: Spread) -> dict[str, float]:
     """Run-level findings for trending, at the plate's centre."""
     fields = train.field.shape[1]
     level = 1.0 + found.shared[:1]
-    angle = np.rad2deg(train.profiles.at(level, found.shared[fields:])[0][0])
-    weight = train.profiles.weight
+    share = np.maximum(train.profiles.at(level, found.shared[fields:])[0][0], 0.0)
+    angle = float(level[0]) * train.profiles.angle
+    excited = share / np.sin(angle / 2.0)  # from the plateau's signal to the excited signal
+    weight = excited / excited.sum()
+    angle = np.rad2deg(angle)
     mean = float(weight @ angle)
     findings = {
         "refocusing_angle_deg": mean,

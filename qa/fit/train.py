@@ -1,10 +1,10 @@
 """Echo trains of all vials of a run at once: T2 and M0 per vial; transmit field and slice profile shared by all.
 
-    S_v(k) = M_v sum_q w_q h_q E_k(alpha_q(b_v, c), T1_v, T2_v) / sin(alpha_q / 2)
+    S_v(k) = M_v sum_q p_q(b_v, c) h_vq E_k(b_v alpha_q, T1_v, T2_v) / sin(b_v alpha_q / 2)
 
-E_k is the phase graph's echo k, q runs over the share of the signal (`qa.fit.profiles`), b_v is a smooth transmit field
-over the plate, c the sizes of the profile's components, and h how much more a part of the slice has recovered within TR
-than the middle has. Shared parameters carry Gaussian priors, so what the echoes do not tell stays uncertain instead of
+E_k is the phase graph's echo k, p_q the share of the signal with refocusing angle alpha_q (`qa.fit.profiles`), b_v a
+smooth transmit field over the plate, c the sizes of the profile's components, and h how far a part of the slice has
+recovered within TR. Shared parameters carry Gaussian priors, so what the echoes do not tell stays uncertain instead of
 going astray. The early echoes of all vials fix the shared parameters; each vial's later echoes fix its T2.
 
 References
@@ -24,7 +24,7 @@ from qa.fit.noise import expected_magnitude
 from qa.fit.profiles import Profiles
 from qa.words import Floats, Ints
 
-LEAST_ANGLE = 0.05  # radians; smaller angles give no signal, and are rounded up smoothly
+SHORTER = 0.7  # a step is tried again, shorter, where its parabola is lowest before so much of it
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -51,10 +51,9 @@ class Train:
         t1 = self.t1_ms if t1_ms is None else t1_ms
         fields = self.field.shape[1]
         level = 1.0 + self.field @ shared[:fields]
-        angle, by_level, by_size, _ = self.profiles.at(level, shared[fields:])
-        n, q = angle.shape
-        angle, inside = _rounded(angle)
-        weight = self.profiles.weight * (np.ones((n, q)) if self.recovered is None else self.recovered)
+        share, share_by_level, share_by_size = self.profiles.at(level, shared[fields:])
+        n, q = share.shape
+        angle = level[:, None] * self.profiles.angle
         amplitude, by_angle, by_t2 = echo_train(
             angle.ravel(),
             self.spacing_ms,
@@ -65,23 +64,20 @@ class Train:
         )
         kept = self.echoes - 1
         amplitude, by_angle, by_t2 = (a[kept].reshape(-1, n, q) for a in (amplitude, by_angle, by_t2))
-        half = np.sin(angle / 2.0)
-        by_angle = (by_angle - amplitude * (0.5 / np.tan(angle / 2.0))) * (weight / half * inside)
-        amplitude, by_t2 = amplitude * (weight / half), by_t2 * (weight / half)
-        along_level = np.einsum("mnq,nq->nm", by_angle, by_level)
-        along_sizes = np.einsum("mnq,nkq->nmk", by_angle, by_size)
-        along_field = along_level[:, :, None] * self.field[:, None, :]
+        scale = 1.0 / np.sin(angle / 2.0)
+        if self.recovered is not None:
+            scale = scale * self.recovered
+        by_level = (by_angle - amplitude * (0.5 / np.tan(angle / 2.0))) * (scale * share * self.profiles.angle)
+        amplitude = amplitude * scale
+        along_level = np.sum(by_level + amplitude * share_by_level, axis=2).T
         return (
-            amplitude.sum(axis=2).T,
-            by_t2.sum(axis=2).T,
-            np.concatenate([along_field, along_sizes], axis=2),
+            np.einsum("mnq,nq->nm", amplitude, share),
+            np.einsum("mnq,nq->nm", by_t2, scale * share),
+            np.concatenate(
+                [along_level[:, :, None] * self.field[:, None, :], np.einsum("mnq,nkq->nmk", amplitude, share_by_size)],
+                axis=2,
+            ),
         )
-
-
-def _rounded(angle: Floats) -> tuple[Floats, Floats]:
-    """Angles kept clear of zero, and the derivative of that."""
-    kept = np.sqrt(np.square(angle) + LEAST_ANGLE**2)
-    return kept, angle / kept
 
 
 def with_recovery(train: Train, shared: Floats) -> Train:
@@ -92,8 +88,8 @@ def with_recovery(train: Train, shared: Floats) -> Train:
     """
     if not np.isfinite(train.tr_ms):
         return train
-    fields = train.field.shape[1]
-    angle, _, _, excitation = train.profiles.at(1.0 + train.field @ shared[:fields], shared[fields:])
+    level = (1.0 + train.field @ shared[: train.field.shape[1]])[:, None]
+    angle, excitation = level * train.profiles.angle, level * train.profiles.excitation
     t1, echoes = train.t1_ms[:, None], train.echoes[-1]
     rest = np.exp(-max(train.tr_ms - echoes * train.spacing_ms, 0.0) / t1)
     once = np.cos(angle) * np.exp(-train.spacing_ms / t1)
@@ -139,28 +135,38 @@ def fit_jointly(
     log_t2, shared = np.log(t2_ms), np.array(shared, float)
     shape = train.shape(t2_ms, shared)[0]
     log_m0 = np.log(np.maximum(_scale(values, shape, weights), 1e-12))
-    damping, converged, fall = 1e-3, False, np.inf
+    damping, converged = 1e-3, False
     now = _evaluate(values, train, weights, log_t2, log_m0, shared)
     for _ in range(most_steps):
         step_t2, step_m0, step_shared, fall = _step(values, train, weights, now, damping)
-        trial = _evaluate(
-            values,
-            train,
-            weights,
-            log_t2 + np.clip(step_t2, -0.7, 0.7),
-            log_m0 + np.clip(step_m0, -0.7, 0.7),
-            shared + step_shared,
-        )
+        step_t2, step_m0 = np.clip(step_t2, -0.7, 0.7), np.clip(step_m0, -0.7, 0.7)
+
+        def along(part: float, at: _Point = now, steps: tuple[Floats, ...] = (step_t2, step_m0, step_shared)) -> _Point:
+            moved = [a + part * b for a, b in zip((at.log_t2, at.log_m0, at.shared), steps, strict=True)]
+            return _evaluate(values, train, weights, *moved)
+
+        trial = along(1.0)
+        part = fall / max(trial.total - now.total + 2.0 * fall, 1e-300)  # the lowest point of a parabola on the way
+        if part < SHORTER:
+            shorter = along(max(part, 0.02))
+            trial = shorter if shorter.total < trial.total else trial
         converged = fall < tolerance * (1.0 + 1e-3 * now.total)
         if trial.total <= now.total:
-            log_t2, log_m0, shared = trial.log_t2, trial.log_m0, trial.shared
-            now, damping = trial, damping * 0.1
+            now, damping = trial, max(damping * 0.1, 1e-7)
         else:
             damping *= 10.0
         if converged or damping > 1e8:
             break
     return Joint(
-        np.exp(log_t2), np.exp(log_m0), shared, now.fitted, now.amplitude, now.jacobian, now.chi2, now.total, converged
+        np.exp(now.log_t2),
+        np.exp(now.log_m0),
+        now.shared,
+        now.fitted,
+        now.amplitude,
+        now.jacobian,
+        now.chi2,
+        now.total,
+        converged,
     )
 
 
