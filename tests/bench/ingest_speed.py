@@ -28,6 +28,7 @@ from qa import intake
 from qa.pipeline import ingest
 from qa.simulate import simulate_run
 from qa.simulate.truth import Form
+from qa.site import Site
 
 
 def timed(work: Callable[[], object]) -> float:
@@ -41,15 +42,15 @@ def alone(folder: Path) -> int:
     return sum(pydicom.dcmread(path).pixel_array.size for path in sorted(folder.rglob("*.dcm")))
 
 
-def only_intake(folder: Path, home: Path) -> int:
+def only_intake(folder: Path, site: Site) -> int:
     """Files to calibrated series."""
-    taken = intake.gather([folder], make_site(home), known=())
+    taken = intake.gather([folder], site, known=())
     return sum(len(one.frames) for session in taken.sessions for one in intake.load(session, RECIPE).series)
 
 
-def whole(folder: Path, home: Path) -> int:
+def whole(folder: Path, site: Site) -> int:
     """Files to a judged book."""
-    return ingest(make_site(home), [folder], celsius=20.0, report=False).used
+    return ingest(site, [folder], celsius=20.0, report=False).used
 
 
 def compare(folder: Path, form: Form, runs: int, matrix: int, repeat: int) -> bool:
@@ -60,10 +61,11 @@ def compare(folder: Path, form: Form, runs: int, matrix: int, repeat: int) -> bo
     spent: dict[str, list[float]] = {"pydicom": [], "intake": [], "ingest": []}
     for turn in range(repeat + 1):
         homes = [folder / f"home-{turn}-{kind}" for kind in ("intake", "ingest")]
+        sites = [make_site(home) for home in homes]
         times = [
             timed(lambda: alone(folder / "in")),
-            timed(lambda at=homes[0]: only_intake(folder / "in", at)),
-            timed(lambda at=homes[1]: whole(folder / "in", at)),
+            timed(lambda at=sites[0]: only_intake(folder / "in", at)),
+            timed(lambda at=sites[1]: whole(folder / "in", at)),
         ]
         for home in homes:
             shutil.rmtree(home)
