@@ -84,9 +84,13 @@ def _against(one: _Series, others: Sequence[_Series]) -> tuple[Floats, Floats, F
     stands = np.full((len(others), one.days.size), np.nan)
     spread = np.full((len(others), one.days.size), np.nan)
     for row, other in enumerate(others):
-        order = np.argsort(np.abs(other.days[None, :] - one.days[:, None]), axis=1)[:, :_NEAREST]
-        apart = np.abs(other.days[order] - one.days[:, None])
-        near = np.where(apart <= _APART_DAYS, other.level[order], np.nan)
+        around = np.searchsorted(other.days, one.days)[:, None] + np.arange(-_NEAREST, _NEAREST)
+        outside = (around < 0) | (around >= other.days.size)
+        around = np.clip(around, 0, other.days.size - 1)
+        apart = np.where(outside, np.inf, np.abs(other.days[around] - one.days[:, None]))
+        nearest = np.argsort(apart, axis=1, kind="stable")[:, :_NEAREST]
+        told_by = np.take_along_axis(around, nearest, axis=1)
+        near = np.where(np.take_along_axis(apart, nearest, axis=1) <= _APART_DAYS, other.level[told_by], np.nan)
         count = np.isfinite(near).sum(axis=1)
         told = count > 0
         stands[row, told] = np.nanmedian(near[told], axis=1)

@@ -96,12 +96,17 @@ def line(value_ms: Floats, reference_ms: Floats, u_reference_ms: Floats) -> Line
 
 def _shared(y: Floats, mean: Floats, x: Floats, weight: Floats) -> Floats | None:
     """Variance of the mean (intercept, slope) as the runs' own lines scatter; None with fewer than two whole runs."""
-    lines = []
-    for run in y:
-        here = np.isfinite(run)
-        if here.sum() >= FEWEST_VIALS and np.unique(x[here]).size > 1:
-            # around the vial means, so that a missing vial does not tilt the line by its own deviation
-            lines.append(weighted_line(x[here], run[here] - mean[here], weight[here])[0])
-    if len(lines) < 2:
+    here = np.isfinite(y)
+    whole = here.sum(axis=1) >= FEWEST_VIALS
+    if whole.sum() < 2:
         return None
-    return np.asarray(np.var(np.array(lines), axis=0, ddof=1) / len(lines), dtype=np.float64)
+    w = np.where(here, weight, 0.0)[whole]
+    # around the vial means, so that a missing vial does not tilt the line by its own deviation
+    apart = np.where(here, y - mean, 0.0)[whole]
+    total = w.sum(axis=1)
+    middle = (w @ x) / total
+    from_middle = x - middle[:, None]
+    power = (w * from_middle**2).sum(axis=1)
+    slope = (w * from_middle * apart).sum(axis=1) / np.where(power > 0, power, np.inf)
+    lines = np.stack([(w * apart).sum(axis=1) / total - slope * middle, slope], axis=1)
+    return np.asarray(np.var(lines, axis=0, ddof=1) / len(lines), dtype=np.float64)

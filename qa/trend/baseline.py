@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import warnings
 from dataclasses import dataclass
 
 import numpy as np
@@ -44,14 +43,18 @@ def hodges_lehmann(values: Floats) -> Floats:
     if not len(values):
         return np.full(values.shape[1:], np.nan)
     i, j = np.triu_indices(len(values))
-    return _nanmedian(0.5 * (values[i] + values[j]))
+    return nanmedian(0.5 * (values[i] + values[j]))
 
 
-def _nanmedian(values: Floats) -> Floats:
-    with warnings.catch_warnings():
-        warnings.simplefilter("ignore", RuntimeWarning)  # a stream without any value stays NaN
-        answer: Floats = np.nanmedian(values, axis=0)
-    return answer
+def nanmedian(values: Floats) -> Floats:
+    """Median down the first axis, NaN left out; a column without any value gives NaN."""
+    count = np.asarray((~np.isnan(values)).sum(axis=0))
+    if not len(values):
+        return np.full(values.shape[1:], np.nan)
+    ordered = np.sort(values, axis=0)  # NaN goes last
+    low, high = np.maximum(count - 1, 0) // 2, np.minimum(count // 2, len(values) - 1)
+    middle = np.take_along_axis(ordered, np.stack([low, high]), axis=0)
+    return np.where(count > 0, middle.mean(axis=0), np.nan)
 
 
 def segments(block: Block, restarted: Stamps, baseline_runs: int) -> tuple[Segment, ...]:
@@ -87,5 +90,5 @@ def _segment(block: Block, first: int, last: int, since: np.datetime64 | None, b
         known,
         100.0 * (value / mean - 1.0),
         u,
-        _nanmedian(np.where(used[:depth], u[:depth], np.nan)) if len(learnt) else np.full(value.shape[1], np.nan),
+        nanmedian(np.where(used[:depth], u[:depth], np.nan)) if len(learnt) else np.full(value.shape[1], np.nan),
     )

@@ -8,6 +8,7 @@ beyond a limit, a quarter to whole runs that lie apart from the run before.
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import lru_cache
 
 import numpy as np
 
@@ -94,7 +95,11 @@ def smooth(series: Chartable, arl: float) -> Smoothed:
 
 def beyond_chance(probability: float, freedom: Floats) -> Floats:
     """The chance limit in sigmas for many degrees of freedom."""
-    grid = np.array([chance_limit(probability, f) for f in _GRID])
     inverse = [0.0 if np.isinf(f) else 1.0 / f for f in _GRID]
-    limit: Floats = np.interp(1.0 / np.maximum(freedom, _GRID[0]), inverse[::-1], grid[::-1])
+    limit: Floats = np.interp(1.0 / np.maximum(freedom, _GRID[0]), inverse[::-1], _chance_limits(probability)[::-1])
     return limit
+
+
+@lru_cache(maxsize=64)
+def _chance_limits(probability: float) -> tuple[float, ...]:
+    return tuple(chance_limit(probability, freedom) for freedom in _GRID)

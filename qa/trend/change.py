@@ -21,7 +21,6 @@ YEAR = 365.25
 FEWEST_AFTER_STEP = 3
 FEWEST_AFTER_SLOPE = 5
 FEWEST_BEFORE = 3
-_MOST_CANDIDATES = 400
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -100,30 +99,52 @@ def peak_chance(z: float, count: int, edge: int) -> float:
 
 @dataclass(frozen=True, slots=True, eq=False)
 class _Search:
+    """All candidate onsets of one kind, (m,): fall of the weighted sum of squares, x'Wx, and estimate."""
+
     kind: Kind
     onset: Floats
     gain: Floats
-    weight: Floats  # of each candidate: the x'Wx
+    weight: Floats
     size: Floats
 
 
 def _search(kind: Kind, t: Floats, y: Floats, weight: Floats, group: Ints) -> _Search | None:
+    """Least squares at every onset at once: sums over the runs after it, from cumulative sums; `y` centred by group."""
     times = np.unique(t)
     after = FEWEST_AFTER_STEP if kind == "step" else FEWEST_AFTER_SLOPE
+    if times.size < after:
+        return None
     onset = times[FEWEST_BEFORE:] if kind == "step" else times
-    onset = onset[onset <= times[-after]] if times.size >= after else onset[:0]
-    if onset.size > _MOST_CANDIDATES:
-        onset = onset[np.linspace(0, onset.size - 1, _MOST_CANDIDATES).astype(int)]
+    onset = onset[onset <= times[-after]]
     if not onset.size:
         return None
-    x = _centred(_regressor(kind, t, onset), weight, group)
-    power = weight @ (x * x)
-    usable = power > 1e-12
+    middle = 0.5 * float(times[0] + times[-1])
+    years, on = (t - middle) / YEAR, (onset - middle) / YEAR
+    power, along = np.zeros(onset.size), np.zeros(onset.size)
+    for number in np.unique(group):
+        here = np.flatnonzero(group == number)
+        here = here[np.argsort(t[here], kind="stable")]
+        first = np.searchsorted(t[here], onset, side="left")
+        w, wy, whole = weight[here], weight[here] * y[here], float(weight[here].sum())
+        s0, a0 = _after(w)[first], _after(wy)[first]
+        if kind == "step":
+            power += s0 - s0**2 / whole
+            along += a0
+        else:
+            s1, s2 = _after(w * years[here])[first], _after(w * years[here] ** 2)[first]
+            of_x = s1 - on * s0
+            power += s2 - 2.0 * on * s1 + on**2 * s0 - of_x**2 / whole
+            along += _after(wy * years[here])[first] - on * a0
+    usable = power > 1e-10 * float(weight.sum())
     if not usable.any():
         return None
-    onset, x, power = onset[usable], x[:, usable], power[usable]
-    along = (weight * y) @ x
+    onset, power, along = onset[usable], power[usable], along[usable]
     return _Search(kind, onset, along**2 / power, power, along / power)
+
+
+def _after(values: Floats) -> Floats:
+    """(n,) -> (n + 1,): sum of the values from each place to the end."""
+    return np.concatenate([np.cumsum(values[::-1])[::-1], [0.0]])
 
 
 def find_change(t: Floats, y: Floats, sd: Floats, group: Ints | None = None) -> Change | None:

@@ -97,9 +97,17 @@ def ewma_level(values: Floats, weight: float, start: Floats | float = 0.0) -> Fl
     given = np.asarray(values, dtype=np.float64)
     level = np.empty_like(given)
     last = np.broadcast_to(np.asarray(start, dtype=np.float64), given.shape[1:]).astype(np.float64)
-    for index, value in enumerate(given):
-        last = np.where(np.isnan(value), last, weight * value + (1.0 - weight) * last)
-        level[index] = last
+    stride = 1 if weight == 1.0 else max(1, int(600.0 / -np.log(1.0 - weight)))  # keeps the powers below within range
+    for begin in range(0, len(given), stride):
+        values = given[begin : begin + stride]
+        there = np.isfinite(values)
+        kept = (1.0 - weight) ** np.cumsum(there, axis=0)  # what is left of the level before, after each value
+        if weight == 1.0:
+            level[begin : begin + stride] = last = np.where(there[0], values[0], last)
+            continue
+        taken = np.cumsum(np.where(there, weight * values, 0.0) / kept, axis=0)
+        level[begin : begin + stride] = kept * (last + taken)
+        last = level[min(begin + stride, len(given)) - 1]
     return level
 
 

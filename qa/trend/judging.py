@@ -148,7 +148,7 @@ class _Bench:
         names = {
             scan: quantity_name(quantity, scan, quantities.count(quantity) > 1) for scan, quantity, _ in block.scans
         }
-        digests = {day: _digest(self.limits, block.scanner, day) for day in set(days)}
+        digests: dict[date, str] = {}
         judged: dict[str, Judgement] = {}
         for segment in segments(block, restarts(self.log, block.scanner, block.phantom), self.baseline_runs):
             wanted = [
@@ -173,8 +173,10 @@ class _Bench:
             for where in wanted:
                 verdict, reasons = self._verdict(block, where, weighing)
                 rows = columns.rows(block, segment.first, where - segment.first)
-                run = block.runs[where]
-                judged[run] = Judgement(run, block.scanner, block.phantom, verdict, reasons, digests[days[where]], rows)
+                run, day = block.runs[where], days[where]
+                if day not in digests:
+                    digests[day] = _digest(self.limits, block.scanner, day)
+                judged[run] = Judgement(run, block.scanner, block.phantom, verdict, reasons, digests[day], rows)
         return judged
 
     def _verdict(self, block: Block, where: int, weighing: Weighing) -> tuple[Verdict, tuple[str, ...]]:

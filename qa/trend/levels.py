@@ -11,7 +11,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from qa.trend.baseline import LOSS, Segment, _nanmedian
+from qa.trend.baseline import LOSS, Segment, nanmedian
 from qa.trend.streams import Bools, Ints
 from qa.words import Floats
 
@@ -63,7 +63,7 @@ def common_level(percent: Floats, sd: Floats) -> Floats:
     if percent.shape[1] < FEWEST_VIALS:
         level = (weight * y).sum(axis=1) / total
     else:
-        level = _nanmedian(np.where(there, percent, np.nan).T)
+        level = nanmedian(np.where(there, percent, np.nan).T)
         for _ in range(4):
             distance = (y - level[:, None]) / (_BIWEIGHT * sd)
             bounded = np.where(there, weight * np.clip(1.0 - distance**2, 0.0, None) ** 2, 0.0)
@@ -76,8 +76,8 @@ def common_level(percent: Floats, sd: Floats) -> Floats:
 def _window_variance(values: Floats, mask: Bools) -> tuple[Floats, Floats]:
     """Mean square about the mean within the mask, one wild value left out, and its degrees of freedom; (S,) each."""
     x = np.where(mask, values, np.nan)
-    middle = _nanmedian(x)
-    rough = 1.4826 * _nanmedian(np.abs(x - middle))
+    middle = nanmedian(x)
+    rough = 1.4826 * nanmedian(np.abs(x - middle))
     x = np.where(np.abs(x - middle) > 5.0 * np.maximum(rough, 1e-9), np.nan, x)
     count = np.isfinite(x).sum(axis=0)
     mean = np.nansum(x, axis=0) / np.maximum(count, 1)
@@ -93,17 +93,16 @@ def _later_variance(values: Floats, judged: Bools, clip: Floats) -> tuple[Floats
     cut at four sigmas, and counts two thirds of a degree of freedom.
     """
     sums, counts = np.zeros_like(values), np.zeros_like(values)
-    last = np.full(values.shape[1], np.nan)
-    total, number = np.zeros(values.shape[1]), np.zeros(values.shape[1])
-    for index in range(len(values)):
-        sums[index], counts[index] = total, number
-        value = values[index]
-        fresh = np.isfinite(value) & judged[index]
-        pair = fresh & np.isfinite(last)
-        half = np.minimum(0.5 * (value - last) ** 2, 16.0 * clip)
-        total = total + np.where(pair, half * (2.0 / 3.0), 0.0)
-        number = number + np.where(pair, 2.0 / 3.0, 0.0)
-        last = np.where(fresh, value, last)
+    if len(values) < 2:
+        return sums, counts
+    fresh = np.isfinite(values) & judged
+    newest = np.maximum.accumulate(np.where(fresh, np.arange(len(values))[:, None], -1), axis=0)
+    before, later = newest[:-1], values[1:]
+    pair = fresh[1:] & (before >= 0)
+    earlier = np.take_along_axis(values, np.maximum(before, 0), axis=0)
+    half = np.minimum(0.5 * (np.where(pair, later - earlier, 0.0)) ** 2, 16.0 * clip)
+    sums[2:] = np.cumsum(half * (2.0 / 3.0), axis=0)[:-1]
+    counts[2:] = np.cumsum(pair * (2.0 / 3.0), axis=0)[:-1]
     return sums, counts
 
 
@@ -119,8 +118,8 @@ def _lane(segment: Segment, scan: str, quantity: str, columns: Ints) -> Lane:
     seen = np.where(used | known, percent, np.nan)
     apart = columns.size >= FEWEST_VIALS
 
-    wide = _nanmedian((u - typical).T) if len(u) else np.zeros(0)
-    common_excess = np.where(wide > 0.05 * _nanmedian(typical), _nanmedian((u**2 - typical**2).T), 0.0)
+    wide = nanmedian((u - typical).T) if len(u) else np.zeros(0)
+    common_excess = np.where(wide > 0.05 * nanmedian(typical), nanmedian((u**2 - typical**2).T), 0.0)
     common_excess = np.clip(np.nan_to_num(common_excess), 0.0, None)
 
     level = common_level(seen, typical)
@@ -128,7 +127,7 @@ def _lane(segment: Segment, scan: str, quantity: str, columns: Ints) -> Lane:
     centre = np.nan_to_num(_masked_mean(residual, used))
     residual = residual - centre
     own, own_freedom = _window_variance(residual, used)
-    ratio = _nanmedian((own / typical**2)[:, None])
+    ratio = nanmedian((own / typical**2)[:, None])
     pooled = (float(ratio[0]) if np.isfinite(ratio[0]) else 1.0) * typical**2
     own = np.where(np.isfinite(own), own, pooled)
     base = (_PRIOR_FREEDOM * pooled + own_freedom * own) / (_PRIOR_FREEDOM + own_freedom)

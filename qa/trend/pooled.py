@@ -6,7 +6,7 @@ from dataclasses import dataclass, field
 
 import numpy as np
 
-from qa.trend.baseline import Segment
+from qa.trend.baseline import Segment, nanmedian
 from qa.trend.change import Change, wild
 from qa.trend.levels import FEWEST_VIALS, Lane, common_level
 from qa.trend.streams import Block, Bools
@@ -32,6 +32,7 @@ class Course:
     percent: Floats  # (r, S)
     sd: Floats  # (S,) scatter of one vial
     level: Floats  # (r,)
+    level_sd: Floats  # (r,) relative uncertainty of the level
     own: Floats  # (r, S)
     wild_run: Bools  # (r,) runs that lie apart as a whole
     current: bool  # the last stretch of its block
@@ -44,22 +45,6 @@ class Course:
     @property
     def phantom(self) -> str:
         return self.block.phantom
-
-    @property
-    def level_sd(self) -> Floats:
-        """(r,) relative uncertainty of the level: runs with few vials or wide statements count less."""
-        there = np.isfinite(self.percent)
-        own = np.sqrt(1.0 / np.maximum((there / self.sd**2).sum(axis=1), 1e-12))
-        usual = float(np.median(own[there.any(axis=1)])) if there.any() else 1.0
-        with np.errstate(invalid="ignore"):
-            columns = [self.block.streams.index(s) for s in self.block.streams if s.scan == self.scan]
-            stated, typical = self.segment.u[:, columns], self.segment.u_typical[columns]
-            excess = np.array(
-                [np.median(row[np.isfinite(row)]) if np.isfinite(row).any() else 0.0 for row in stated**2 - typical**2]
-            )
-        wide = np.where(excess > 0.1 * float(np.nanmedian(typical)) ** 2, np.clip(excess, 0.0, None), 0.0)
-        u: Floats = np.sqrt(np.maximum(own, usual) ** 2 + wide)
-        return u
 
     def relevel(self) -> None:
         """Works the level out again without the vials that were found to move by themselves."""
@@ -78,6 +63,17 @@ def _start(level: Floats, segment: Segment) -> float:
     return float(np.median(level[window])) if window.any() else 0.0
 
 
+def _level_sd(percent: Floats, sd: Floats, stated: Floats, typical: Floats) -> Floats:
+    """(r,) relative uncertainty of the level: runs with few vials or wide statements count less."""
+    there = np.isfinite(percent)
+    own = np.sqrt(1.0 / np.maximum((there / sd**2).sum(axis=1), 1e-12))
+    usual = float(np.median(own[there.any(axis=1)])) if there.any() else 1.0
+    excess = np.nan_to_num(nanmedian((stated**2 - typical**2).T))
+    wide = np.where(excess > 0.1 * float(np.nan_to_num(nanmedian(typical[:, None])[0])) ** 2, excess, 0.0)
+    u: Floats = np.sqrt(np.maximum(own, usual) ** 2 + np.clip(wide, 0.0, None))
+    return u
+
+
 def courses(block: Block, stretches: tuple[Segment, ...], parts: tuple[tuple[Lane, ...], ...]) -> list[Course]:
     """Every course of a block that has enough runs to be asked for a change."""
     made = []
@@ -85,7 +81,7 @@ def courses(block: Block, stretches: tuple[Segment, ...], parts: tuple[tuple[Lan
         rows = slice(segment.first, segment.last)
         for lane in split:
             percent = segment.percent[:, lane.columns]
-            sd = np.asarray(lane.vials.sd[-1]) if len(percent) else np.ones(lane.columns.size)
+            sd = nanmedian(lane.vials.sd[-8:]) if len(percent) else np.ones(lane.columns.size)
             sd = np.where(np.isfinite(sd), sd, np.nanmedian(sd) if np.isfinite(sd).any() else 1.0)
             level = common_level(percent, sd)
             if np.isfinite(level).sum() < FEWEST_RUNS:
@@ -105,6 +101,7 @@ def courses(block: Block, stretches: tuple[Segment, ...], parts: tuple[tuple[Lan
                     percent,
                     sd,
                     level,
+                    _level_sd(percent, sd, segment.u[:, lane.columns], segment.u_typical[lane.columns]),
                     percent - level[:, None] if apart else percent,
                     wild(level, typical),
                     number == len(stretches) - 1,

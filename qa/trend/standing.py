@@ -9,6 +9,7 @@ from datetime import date
 import numpy as np
 
 from qa.site.limits import Against, LimitBlock, in_force
+from qa.trend.baseline import nanmedian
 from qa.trend.streams import Block, Bools, Ints
 from qa.words import Floats, Quantity
 
@@ -24,14 +25,10 @@ class Tolerance:
         """Only those runs."""
         return Tolerance(self.watch[chosen], self.act[chosen])
 
-    def usual(self, index: int, columns: Ints) -> tuple[float, float]:
-        """Median watch and act limits of some streams at one run; infinite where none has any."""
-        return _median(self.watch[index, columns]), _median(self.act[index, columns])
-
-
-def _median(limits: Floats) -> float:
-    there = limits[np.isfinite(limits)]
-    return float(np.median(there)) if there.size else float("inf")
+    def usual(self, columns: Ints) -> tuple[Floats, Floats]:
+        """(R,) median watch and act limits of some streams; infinite where none has any."""
+        watch, act = (nanmedian(limits[:, columns].T) for limits in (self.watch, self.act))
+        return np.where(np.isnan(watch), np.inf, watch), np.where(np.isnan(act), np.inf, act)
 
 
 def tolerance(block: Block, days: Sequence[date], limits: tuple[LimitBlock, ...], against: Against) -> Tolerance:

@@ -105,17 +105,16 @@ def _block(scanner: str, phantom: str, rows: pd.DataFrame) -> Block:
     import pandas as pd
 
     when = stamps(rows["acquired"])
-    run_codes, run_names = pd.factorize(rows["run"])
+    run_codes, run_index = pd.factorize(rows["run"])
+    run_names = [str(name) for name in run_index]
     first = np.full(len(run_names), np.iinfo(np.int64).max)
     np.minimum.at(first, run_codes, when.astype(np.int64))
-    order = np.lexsort((np.asarray([str(name) for name in run_names]), first))
+    order = np.lexsort((np.asarray(run_names), first))
     place = np.empty_like(order)
     place[order] = np.arange(order.size)
     r = place[run_codes]
 
-    keys = pd.MultiIndex.from_arrays([rows["scan"].astype(str), rows["vial"].astype(str), rows["quantity"].astype(str)])
-    stream_codes, stream_names = pd.factorize(keys)
-    streams = [Stream(*names) for names in stream_names]
+    stream_codes, streams = _streams(rows)
     by_name = sorted(
         range(len(streams)), key=lambda i: (streams[i].quantity, streams[i].scan, natural(streams[i].vial))
     )
@@ -155,7 +154,7 @@ def _block(scanner: str, phantom: str, rows: pd.DataFrame) -> Block:
     return Block(
         scanner,
         phantom,
-        tuple(str(run_names[i]) for i in order),
+        tuple(run_names[i] for i in order),
         first[order].view("datetime64[ns]"),
         void,
         celsius,
@@ -168,6 +167,19 @@ def _block(scanner: str, phantom: str, rows: pd.DataFrame) -> Block:
         matrix(_column(rows, "u_reference_ms")),
         asked,
     )
+
+
+def _streams(rows: pd.DataFrame) -> tuple[Ints, list[Stream]]:
+    """The stream of each row as a code, and what the codes mean."""
+    import pandas as pd
+
+    parts = [pd.factorize(rows[name]) for name in ("scan", "vial", "quantity")]
+    code = np.zeros(len(rows), dtype=np.intp)
+    for codes, found in parts:
+        code = code * len(found) + codes
+    kinds, first, stream_codes = np.unique(code, return_index=True, return_inverse=True)
+    names = [[str(found[codes[row]]) for codes, found in parts] for row in first[: kinds.size]]
+    return stream_codes, [Stream(scan, vial, quantity) for scan, vial, quantity in names]
 
 
 def _typical(u: Floats) -> float:

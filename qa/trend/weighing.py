@@ -10,11 +10,11 @@ import numpy as np
 from qa.trend.baseline import Segment
 from qa.trend.budget import Shares, Smoothed, beyond_chance
 from qa.trend.judgements import StreamColumns, graded
-from qa.trend.levels import Chartable, Lane
+from qa.trend.levels import Lane
 from qa.trend.sentences import counted, percent, plain, vials
 from qa.trend.standing import Tolerance, standing
 from qa.trend.streams import Block, Bools, Ints
-from qa.words import Verdict
+from qa.words import Floats, Verdict
 
 Said = list[tuple[Verdict, str]]
 
@@ -63,12 +63,14 @@ class Weighing:
         self.from_baseline = standing(self.percent, self.sd, np.fmax(self.sd, stated), guard, self.baseline)
         usual = np.full(shape, float(beyond_chance(share.reading, np.array(np.inf))))
         self.from_reference = standing(self.deviation, self.u_deviation, self.u_deviation, usual, self.reference)
+        grade = np.maximum(self.from_baseline.level, self.from_reference.level)
+        self.grade: Ints = np.where(self.chart_signal, np.maximum(grade, 1), grade)
         self.done: Ints = np.cumsum(segment.used, axis=0)
+        self.usual = [self.baseline.usual(one.lane.columns) for one in charts]
+        self.run_limit = [_run_limit(one.lane, share) for one in charts]
 
     def columns(self) -> StreamColumns:
         """What the stream rows are made of."""
-        grade = np.maximum(self.from_baseline.level, self.from_reference.level)
-        grade = np.where(self.chart_signal, np.maximum(grade, 1), grade)
         return StreamColumns(
             self.percent,
             self.sd,
@@ -78,7 +80,7 @@ class Weighing:
             self.limit,
             self.baseline.watch,
             self.baseline.act,
-            grade,
+            self.grade,
             self.done,
             self.segment.known,
         )
@@ -86,8 +88,8 @@ class Weighing:
     def said(self, index: int) -> Said:
         """All that is to be said of run `index` of the segment, which has at least one usable reading."""
         said: Said = []
-        for one in self.charts:
-            said += self._scan(index, one)
+        for number in range(len(self.charts)):
+            said += self._scan(index, number)
         here = np.isfinite(self.block.value[self.segment.first + index])
         return (
             said
@@ -97,26 +99,29 @@ class Weighing:
             + self._learning(index, here)
         )
 
-    def _scan(self, index: int, one: Charted) -> Said:
-        lane = one.lane
-        together = self._together(index, lane)
-        said = [together[0]] if together else self._level_chart(index, one)
-        explained = together[1] if together else np.zeros(lane.columns.size, dtype=bool)
-        for place in np.flatnonzero(~explained):
+    def _scan(self, index: int, number: int) -> Said:
+        lane = self.charts[number].lane
+        together = self._together(index, number)
+        said = [together[0]] if together else self._level_chart(index, number)
+        speaks = self.grade[index, lane.columns] > 0
+        if together:
+            speaks &= ~together[1]
+        for place in np.flatnonzero(speaks):
             said += self._vial(index, int(lane.columns[place]), lane)
         return said
 
-    def _together(self, index: int, lane: Lane) -> tuple[tuple[Verdict, str], Bools] | None:
+    def _together(self, index: int, number: int) -> tuple[tuple[Verdict, str], Bools] | None:
         """What is said once for all vials where they are beyond a limit as one, and which vials that explains."""
+        lane = self.charts[number].lane
         if lane.level is None or lane.columns.size < 3 or not np.isfinite(lane.level.percent[index]):
             return None
         level, u = float(lane.level.percent[index]), float(lane.level.sd[index])
         beyond = self.from_baseline.level[index, lane.columns]
-        watch, act = self.baseline.usual(index, lane.columns)
-        number = self.percent[index, lane.columns]
-        with_it = (beyond > 0) & (np.sign(number) == np.sign(level))
-        judged = int(np.isfinite(number).sum())
-        beyond_watch = abs(level) > max(watch, self._run_limit(index, lane.level))
+        watch, act = (float(limit[index]) for limit in self.usual[number])
+        percents = self.percent[index, lane.columns]
+        with_it = (beyond > 0) & (np.sign(percents) == np.sign(level))
+        judged = int(np.isfinite(percents).sum())
+        beyond_watch = abs(level) > max(watch, float(self.run_limit[number][index]))
         if not (beyond_watch or with_it.sum() >= max(3, 0.5 * judged)):
             return None
         explained = with_it & ~self.chart_signal[index, lane.columns]
@@ -129,7 +134,8 @@ class Weighing:
         acting, watching = int(((beyond == 2) & with_it).sum()), int(with_it.sum())
         return (graded(grade), f"{text} ({counted(acting, watching, judged)})."), explained
 
-    def _level_chart(self, index: int, one: Charted) -> Said:
+    def _level_chart(self, index: int, number: int) -> Said:
+        one = self.charts[number]
         level_of, common, name = one.lane.level, one.common, self.names[one.lane.scan]
         if common is None or level_of is None or not np.isfinite(level_of.percent[index]):
             return []
@@ -140,18 +146,13 @@ class Weighing:
                 f"baseline, beyond what chance gives ({common.limit[index]:.2f} %)."
             )
             return [(Verdict.WATCH, text)]
-        if abs(level) > self._run_limit(index, level_of):
+        if abs(level) > self.run_limit[number][index]:
             text = (
                 f"All vials together lie {percent(level, u)} from their {name} baseline in this run, further than "
                 "single runs scatter: repeat the run before concluding (temperature, position, recipe)."
             )
             return [(Verdict.WATCH, text)]
         return []
-
-    def _run_limit(self, index: int, level: Chartable) -> float:
-        """How far chance takes the level of a single run from the baseline, percent."""
-        guard = float(beyond_chance(self.share.run, np.asarray(level.freedom))[index])
-        return guard * float(level.sd[index] * np.sqrt(1.0 + 1.0 / np.maximum(level.runs, 1.0)))
 
     def _vial(self, index: int, column: int, lane: Lane) -> Said:
         said: Said = []
@@ -234,3 +235,12 @@ class Weighing:
             everything = len(labels) > 1 and len(labels) == sum(stream.scan == scan for stream in self.block.streams)
             parts.append(f"{self.names[scan]}: {'every vial' if everything else vials(labels)}")
         return "; ".join(parts)
+
+
+def _run_limit(lane: Lane, share: Shares) -> Floats:
+    """(r,) how far chance takes the level of a single run from the baseline, percent; infinite without a level."""
+    level = lane.level
+    if level is None:
+        return np.full(len(lane.vials.percent), np.inf)
+    guard = beyond_chance(share.run, np.asarray(level.freedom))
+    return np.asarray(guard * level.sd * np.sqrt(1.0 + 1.0 / np.maximum(level.runs, 1.0)), dtype=np.float64)
