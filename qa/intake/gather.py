@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import hashlib
+import os
 from collections.abc import Callable, Container, Iterable, Mapping, Sequence
 from dataclasses import dataclass, replace
 from pathlib import Path
@@ -14,11 +15,13 @@ from qa.intake.holds import hold
 from qa.intake.persons import blanked, personal_keywords
 from qa.intake.reader import DatasetCache, looks_like_dicom, parse, quiet_pydicom, read_file
 from qa.intake.series import FileRecord, Held, Session
+from qa.intake.unpack import HEAD, is_archive, members
 from qa.intake.walk import files_below
 from qa.site import Site
 from qa.site.paste import phantom_block, scanner_block
 from qa.words import Consequence, Remark
 
+LARGEST_ON_DISK = 2 * 1024**3  # bytes of one file
 Progress = Callable[[str, int, int], None]
 
 
@@ -37,7 +40,7 @@ def gather(paths: Sequence[Path], site: Site, *, known: Container[str], progress
 
     Parameters
     ----------
-    paths : files and folders
+    paths : files, folders, and archives of either
     known : hashes of files that are in the book already
     progress : told what is being done, how many are done, out of how many
 
@@ -59,7 +62,7 @@ def gather(paths: Sequence[Path], site: Site, *, known: Container[str], progress
     if progress:
         progress("reading files", len(files), len(files))
     sessions = tuple(_session(*key, headers, site, taking.cache) for key, headers in taking.found.items())
-    return Intake(sessions, tuple(taking.held), len(files), taking.duplicates)
+    return Intake(sessions, tuple(taking.held), taking.seen, taking.duplicates)
 
 
 class _Taking:
@@ -70,14 +73,31 @@ class _Taking:
         self.archive, self.cache, self.wanted = Archive(site.archive), DatasetCache(), wanted_keywords(site)
         self.found: dict[tuple[str, str, str], list[FileHeader]] = {}
         self.held: list[Held] = []
-        self.duplicates = 0
+        self.seen = self.duplicates = 0
         self._taken: dict[str, str] = {}  # SOP Instance UID = content hash
         self._hashes: set[str] = set()
 
     def take(self, path: Path) -> None:
-        """Read one file and put it where it belongs."""
-        content = _content(path)
-        ended = content if isinstance(content, Held) else self._settle(content, str(path))
+        """Read one file, or every file in an archive, and put it where it belongs."""
+        try:
+            with path.open("rb") as file:
+                head = file.read(HEAD)
+                if looks_like_dicom(head):
+                    size = os.fstat(file.fileno()).st_size
+                    found = head + file.read() if size <= LARGEST_ON_DISK else _oversize(path, size)
+                    self._sort(str(path), found)
+                    return
+            if not is_archive(head):
+                self._sort(str(path), hold(str(path), "not-dicom"))
+                return
+            for label, content in members(path):
+                self._sort(label, content)
+        except OSError as error:
+            self._sort(str(path), hold(str(path), "unreadable", error.strerror or type(error).__name__))
+
+    def _sort(self, path: str, content: bytes | Held) -> None:
+        self.seen += 1
+        ended = content if isinstance(content, Held) else self._settle(content, path)
         if ended is None:
             self.duplicates += 1
         elif isinstance(ended, Held):
@@ -235,16 +255,8 @@ def _session(
     )
 
 
-def _content(path: Path) -> bytes | Held:
-    """The file's bytes; files that are plainly something else are not read to their end."""
-    try:
-        with path.open("rb") as file:
-            head = file.read(132)
-            if not looks_like_dicom(head):
-                return hold(str(path), "not-dicom")
-            return head + file.read()
-    except OSError as error:
-        return hold(str(path), "unreadable", error.strerror or type(error).__name__)
+def _oversize(path: Path, size: int) -> Held:
+    return hold(str(path), "too-large", f"{size} bytes")
 
 
 def _number(text: str) -> float | None:

@@ -13,8 +13,13 @@ CODES: dict[str, tuple[str, str]] = {
     ),
     "truncated": ("ends before its pixel data do", "Copy or export it again: the transfer was cut short."),
     "damaged": ("has a header that cannot be understood", "Export it again from the scanner or archive."),
+    "damaged-archive": (
+        "is an archive, or lies in one, that cannot be read to its end",
+        "Pack it again, or unpack it yourself and ingest the folder.",
+    ),
+    "encrypted": ("is encrypted", "Unpack the archive yourself and ingest the folder."),
     "no-pixels": ("has no pixel data", "Export it again with pixel data."),
-    "too-large": ("claims more pixels than this tool accepts", "Check the file: no phantom image is that large."),
+    "too-large": ("claims more than this tool accepts", "Check the file: no phantom image is that large."),
     "not-grey": ("is not a grey-scale image", "Only images with one sample per pixel are measured."),
     "undecodable": (
         "has pixel data that cannot be decoded",

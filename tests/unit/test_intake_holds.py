@@ -15,7 +15,7 @@ from pydicom.sequence import Sequence
 from pydicom.uid import DeflatedExplicitVRLittleEndian
 
 from qa import intake
-from qa.intake.gather import _content
+from qa.intake.gather import _Taking
 from qa.intake.holds import CODES, hold
 
 
@@ -275,12 +275,13 @@ def test_a_file_without_permission_is_held(site, record, as_nobody):
     for name, mode, path in (("open", 0o644, record.files[0]), ("shut", 0o000, record.files[1])):
         shutil.copy(path, as_nobody / name)
         (as_nobody / name).chmod(mode)
+    taking = _Taking(site, ())
     if os.getuid() == 0:
         os.seteuid(65534)
-    assert isinstance(_content(as_nobody / "open"), bytes)
-    held = _content(as_nobody / "shut")
-    assert held.code == "unreadable"
-    assert "Permission denied" in held.reason
+    assert (as_nobody / "open").read_bytes()
+    taking.take(as_nobody / "shut")
+    assert [(held.path, held.code) for held in taking.held] == [(str(as_nobody / "shut"), "unreadable")]
+    assert "Permission denied" in taking.held[0].reason
 
 
 def test_every_code_has_a_meaning_and_reads_as_a_sentence():
