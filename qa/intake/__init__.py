@@ -1,5 +1,5 @@
-"""Intake room. Enters: DICOM files and folders. Leaves: sessions, their calibrated series, held files with reasons.
-Knows nothing of vials or fitting.
+"""Intake room. Enters: DICOM files, folders, zip and tar archives. Leaves: sessions, their calibrated series, and
+files held with reasons. Knows nothing of vials or fitting.
 
 `gather` reads files into sessions (headers only) and the archive; `load` decodes a session's pixels into the series of
 a recipe; `session_from_archive` and `merge` bring back what came in before. Hold codes are a table in `holds`.

@@ -7,11 +7,12 @@ Knows nothing of: signal models, times, DICOM, the database. Labels come from th
 
 How: `evidence` (maps of where a vial could be, whatever its contrast) -> `search` (all ways the plate could lie on
 them) -> `find` (is the best one good enough, and better than every other labelling?) -> `rims` (to a small part of a
-voxel) -> `region` (voxels clear of walls, without bubbles).
+voxel) -> `region` (voxels clear of walls, without bubbles) -> `ringing` (what reaches over the walls all the same).
 """
 
 from qa.locate.find import locate
 from qa.locate.placement import NotLocated, Placement, Region
 from qa.locate.region import regions
+from qa.locate.ringing import calm, independent_voxels
 
-__all__ = ["NotLocated", "Placement", "Region", "locate", "regions"]
+__all__ = ["NotLocated", "Placement", "Region", "calm", "independent_voxels", "locate", "regions"]
