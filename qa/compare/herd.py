@@ -11,7 +11,6 @@ from qa.compare.agreement import Departure
 from qa.compare.slabs import Slab
 from qa.compare.tables import day_of
 from qa.trend.change import Change, find_changes, measure, wild
-from qa.trend.findings import rate_interval
 from qa.trend.levels import common_level
 from qa.words import Floats, Ints
 
@@ -212,7 +211,7 @@ def _departure(
     onset, returned = day_of(change.onset), day_of(undone) if undone is not None else None
     between = (day_of(change.earliest), day_of(change.latest))
     if change.kind == "slope":
-        rate = rate_interval(change) or (float("nan"), float("nan"))
+        rate = change.rate_interval() or (float("nan"), float("nan"))
         how = f"has drifted away from the others by {change.rate:+.1f} % a year ({rate[0]:+.1f} to {rate[1]:+.1f})"
         sentence = f"{quantity} ({scan}) on {name} {how} since about {onset} (between {between[0]} and {between[1]})"
     else:

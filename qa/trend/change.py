@@ -25,7 +25,10 @@ FEWEST_BEFORE = 3
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Change:
-    """One change. Times in days (the unit of the series' times), sizes in percent, u are standard uncertainties."""
+    """One change. Times in days (the unit of the series' times), sizes in percent.
+
+    Standard uncertainties contain that of the onset.
+    """
 
     kind: Kind
     onset: float  # step: time of the first run after it; slope: where the line leaves the level
@@ -46,9 +49,16 @@ class Change:
         return np.asarray(self.rate * np.clip(t - self.onset, 0.0, None) / YEAR, dtype=np.float64)
 
     def interval(self, level: float = 0.90) -> tuple[float, float]:
-        """Interval of the size, given the onset."""
+        """Interval of the size."""
         reach = float(stdtrit(self.freedom, 0.5 + level / 2.0)) * self.u_size
         return self.size - reach, self.size + reach
+
+    def rate_interval(self, level: float = 0.90) -> tuple[float, float] | None:
+        """Interval of the rate; None for a step."""
+        if self.kind == "step":
+            return None
+        reach = float(stdtrit(self.freedom, 0.5 + level / 2.0)) * self.u_rate
+        return self.rate - reach, self.rate + reach
 
 
 def wild(values: Floats, sd: Floats, width: float = 4.0) -> Bools:
@@ -191,19 +201,21 @@ def find_change(t: Floats, y: Floats, sd: Floats, group: Ints | None = None) -> 
     favour = float("inf")
     if other:
         favour = float(log_likelihood[k] + power * np.log(max(rss0 - float(other[0].gain.max()), 1e-12 * rss0)))
-    earliest, latest = _onset_set(best, log_likelihood, t)
-    u = float(np.sqrt(scale * inflation / best.weight[k]))
-    span = 1.0 if best.kind == "step" else float(t.max() - best.onset[k]) / YEAR
-    size = float(best.size[k])
+    mass = _onset_mass(best, log_likelihood, t)
+    earliest, latest = _onset_set(best, mass, t)
+    variance = scale * inflation / best.weight
+    span = np.ones(best.onset.size) if best.kind == "step" else (t.max() - best.onset) / YEAR
+    size = best.size * span
+    slope = best.kind == "slope"
     return Change(
         best.kind,
         float(best.onset[k]),
         earliest,
         latest,
-        size * span,
-        u * span,
-        size if best.kind == "slope" else float("nan"),
-        u if best.kind == "slope" else float("nan"),
+        float(size[k]),
+        _with_onset(size, variance * span**2, mass, k),
+        float(best.size[k]) if slope else float("nan"),
+        _with_onset(best.size, variance, mass, k) if slope else float("nan"),
         freedom,
         chance,
         favour,
@@ -221,16 +233,26 @@ def _inflation(t: Floats, white: Floats, group: Ints) -> float:
     return (1.0 + rho) / (1.0 - rho)
 
 
-def _onset_set(search: _Search, log_likelihood: Floats, t: Floats) -> tuple[float, float]:
-    """The smallest set of onsets that holds 90 % of the likelihood, spread evenly in time before looking."""
+def _onset_mass(search: _Search, log_likelihood: Floats, t: Floats) -> Floats:
+    """(m,) how likely each candidate is the onset, spread evenly in time before looking; sums to 1."""
     times = np.unique(t)
     place = np.searchsorted(times, search.onset)
     gap = times[place] - times[np.maximum(place - 1, 0)]
     gap = np.where(gap > 0, gap, np.median(np.diff(times)))
     log_density = log_likelihood - 0.5 * np.log(search.weight)
     mass = gap * np.exp(log_density - log_density.max())
-    mass /= mass.sum()
-    order = np.argsort(-mass / gap, kind="stable")
+    return np.asarray(mass / mass.sum(), dtype=np.float64)
+
+
+def _with_onset(size: Floats, variance: Floats, mass: Floats, k: int) -> float:
+    """Standard uncertainty of the estimate at candidate k when the onset is only known by its likelihood."""
+    return float(np.sqrt(mass @ (variance + (size - size[k]) ** 2)))
+
+
+def _onset_set(search: _Search, mass: Floats, t: Floats) -> tuple[float, float]:
+    """The smallest set of onsets that holds 90 % of the likelihood."""
+    times = np.unique(t)
+    order = np.argsort(-mass, kind="stable")
     kept = order[: int(np.searchsorted(np.cumsum(mass[order]), 0.90)) + 1]
     first, last = search.onset[kept].min(), search.onset[kept].max()
     if search.kind == "step":  # it happened after the run before the first candidate

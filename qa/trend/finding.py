@@ -18,7 +18,7 @@ from qa.trend.attribute import ask, why_level, why_vial
 from qa.trend.baseline import Segment, segments
 from qa.trend.budget import Promise
 from qa.trend.change import Change, find_change, find_changes
-from qa.trend.findings import Cause, Finding, FindingState, day_of, key, rate_interval
+from qa.trend.findings import Cause, Finding, FindingState, day_of, key
 from qa.trend.forecast import forecast
 from qa.trend.levels import FEWEST_VIALS, lanes
 from qa.trend.logbook import near
@@ -300,7 +300,7 @@ class _Finder:
             change.size,
             (low, high),
             change.rate if change.kind == "slope" else None,
-            rate_interval(change),
+            change.rate_interval(),
             cause,
             (*reasons, *shape(change), *events(entries)),
             entries,

@@ -7,7 +7,6 @@ from dataclasses import asdict, dataclass
 from datetime import UTC, date, datetime
 from typing import Any, Literal
 
-from qa.trend.change import Change
 from qa.words import Verdict
 
 FindingKind = Literal["step", "slope", "spread", "outlier", "limit"]
@@ -90,13 +89,3 @@ def key(*parts: object) -> str:
 def day_of(days: float) -> date:
     """The UTC date of a time in days since the epoch."""
     return datetime.fromtimestamp(days * 86400.0, tz=UTC).date()
-
-
-def rate_interval(change: Change) -> tuple[float, float] | None:
-    """90 % interval of the rate, percent per year; None for a step."""
-    if change.kind == "step" or change.size == 0:
-        return None
-    low, high = change.interval()
-    scale = change.rate / change.size
-    first, second = low * scale, high * scale
-    return (min(first, second), max(first, second))

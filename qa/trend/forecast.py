@@ -7,7 +7,7 @@ from datetime import date, timedelta
 import numpy as np
 
 from qa.trend.change import YEAR, Change
-from qa.trend.findings import Forecast, rate_interval
+from qa.trend.findings import Forecast
 
 HORIZON_YEARS = 10.0
 
@@ -21,7 +21,7 @@ def forecast(change: Change, now_percent: float, limit_percent: float, today: da
     left = limit_percent - side * now_percent
     if left <= 0:
         return Forecast(today, today, today)
-    low, high = sorted(abs(r) if np.sign(r) == side else 0.0 for r in rate_interval(change) or (0.0, 0.0))
+    low, high = sorted(abs(r) if np.sign(r) == side else 0.0 for r in change.rate_interval() or (0.0, 0.0))
     return Forecast(_after(today, left, abs(change.rate)), _after(today, left, high), _after(today, left, low))
 
 

@@ -8,7 +8,7 @@ from datetime import date
 import numpy as np
 
 from qa.trend.change import Change
-from qa.trend.findings import NearEntry, rate_interval
+from qa.trend.findings import NearEntry
 
 
 def shape(change: Change) -> tuple[str, ...]:
@@ -37,7 +37,7 @@ def sentence(
     places = " and ".join(scanners)
     low, high = sorted(change.interval())
     if change.kind == "slope":
-        rate = rate_interval(change) or (float("nan"), float("nan"))
+        rate = change.rate_interval() or (float("nan"), float("nan"))
         return (
             f"{name} of {subject} on {places} has drifted by {change.rate:+.1f} % a year ({rate[0]:+.1f} to "
             f"{rate[1]:+.1f}) since about {onset}, {change.size:+.1f} % in all."
