@@ -205,7 +205,7 @@ def _robust_fit(values: Floats, train: Train, signals: Signals, start: Floats) -
     weights = plain
     t2, shared = _coarse(values, train, weights, start)
     for again in range(ROBUST_ROUNDS + 1):
-        train = with_recovery(train, shared)
+        train = with_recovery(train, t2, shared)
         found = fit_jointly(values, train, weights, t2, shared)
         t2, shared = found.t2_ms, found.shared
         plain = _weights(found.amplitude, signals) if signals.noise > 0 else plain
@@ -231,7 +231,7 @@ def _coarse(values: Floats, train: Train, weights: Floats, start: Floats) -> tup
         shared[fields] = first
         found = fit_jointly(
             values[few, :count],
-            with_recovery(part, shared),
+            with_recovery(part, start[few], shared),
             weights[few, :count],
             start[few],
             shared,
@@ -296,7 +296,7 @@ def _curves(signals: Signals, of_vials: Estimate, owner: Ints, known: Ints, grid
     )
     t2 = (centre[:, None] * np.exp(grid)).ravel()
     shared = np.concatenate([[1.0], sizes])
-    shape = with_recovery(train, shared).shape(t2, shared)[0]
+    shape = with_recovery(train, t2, shared).shape(t2, shared)[0]
     return shape.reshape(len(known), points, -1)
 
 

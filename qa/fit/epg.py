@@ -2,7 +2,8 @@
 
 In a CPMG train every configuration is real, and just before and after a refocusing pulse only odd orders of dephasing
 are occupied, counted in units of half an echo spacing. So a train is three real vectors: F of orders +1, +3, ...,
-F of orders -1, -3, ..., and Z of orders 1, 3, ... Orders that cannot return within the train are dropped.
+F of orders -1, -3, ..., and Z of orders 1, 3, ... Orders that cannot return within the train are dropped. What was left
+along the field has a train of its own, of even orders, that gives no echo but decides how the next repetition begins.
 
 References
 ----------
@@ -60,6 +61,37 @@ def echo_train(
             now[:2, 2] += part[:2, :kept]
         _advance(state, now, kept, e1, e2)
     return found[0], *(found[1:] if slopes else np.empty((2, 0, r)))
+
+
+def left_along_field(
+    angle_rad: Floats, spacing_ms: float, t1_ms: Floats, t2_ms: Floats, echoes: int
+) -> tuple[Floats, Floats]:
+    """Longitudinal magnetisation at the last echo: the share kept of what the excitation left, and what has regrown.
+
+    Parameters as in `echo_train`; both results are (r,), the second in units of equilibrium.
+    """
+    angle, t1, t2 = (np.ravel(a) for a in np.broadcast_arrays(np.asarray(angle_rad, float), t1_ms, t2_ms))
+    r, pulse = angle.size, _pulse(angle)
+    e1, e2 = np.exp(-spacing_ms / t1), np.exp(-spacing_ms / t2)
+    half = np.exp(-0.5 * spacing_ms / t1)
+    size = echoes // 2 + 2
+    state = np.zeros((3, 2, size, r))  # F+, F- and -Z of orders 0, 2, ...; without regrowth from 1, with it from 0
+    after, work = np.empty_like(state), np.empty((2, size, r))
+    state[2, 0, 0], state[2, 1, 0] = -half, half - 1.0
+    for j in range(echoes):
+        kept = min(j + 1, echoes - j, size - 1)
+        now = after[:, :, :kept]
+        _apply(pulse, state[:, :, :kept], now, work[:, :kept])
+        if j == echoes - 1:
+            break
+        np.multiply(now[0], e2, out=state[0, :, 1 : kept + 1])
+        np.multiply(now[1, :, 1:], e2, out=state[1, :, : kept - 1])
+        state[1, :, kept - 1 : kept + 1] = 0.0
+        state[0, :, 0] = -state[1, :, 0]
+        np.multiply(now[2], e1, out=state[2, :, :kept])
+        state[2, :, kept : kept + 1] = 0.0
+        state[2, 1, 0] -= 1.0 - e1
+    return -half * after[2, 0, 0], -half * after[2, 1, 0] + 1.0 - half
 
 
 def _pulse(angle: Floats) -> tuple[Floats, Floats, Floats, Floats]:

@@ -19,7 +19,7 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
-from qa.fit.epg import echo_train
+from qa.fit.epg import echo_train, left_along_field
 from qa.fit.noise import expected_magnitude
 from qa.fit.profiles import Profiles
 from qa.words import Floats, Ints
@@ -80,22 +80,19 @@ class Train:
         )
 
 
-def with_recovery(train: Train, shared: Floats) -> Train:
-    """The train with longitudinal magnetisation before each excitation in the steady state, over its mean.
-
-    What the pulses leave along the field and what regrows during the train is followed without its way through
-    transverse states, which is a small part of a small correction.
-    """
+def with_recovery(train: Train, t2_ms: Floats, shared: Floats) -> Train:
+    """The train with longitudinal magnetisation before each excitation in the steady state, over its mean."""
     if not np.isfinite(train.tr_ms):
         return train
     level = (1.0 + train.field @ shared[: train.field.shape[1]])[:, None]
     angle, excitation = level * train.profiles.angle, level * train.profiles.excitation
-    t1, echoes = train.t1_ms[:, None], train.echoes[-1]
-    rest = np.exp(-max(train.tr_ms - echoes * train.spacing_ms, 0.0) / t1)
-    once = np.cos(angle) * np.exp(-train.spacing_ms / t1)
-    left = once**echoes
-    grown = -np.expm1(-train.spacing_ms / t1) * (1.0 - left) / (1.0 - once)
-    start = (1.0 - rest + rest * grown) / (1.0 - rest * left * np.cos(excitation))
+    q, echoes = angle.shape[1], int(train.echoes[-1])
+    kept, regrown = left_along_field(
+        angle.ravel(), train.spacing_ms, np.repeat(train.t1_ms, q), np.repeat(t2_ms, q), echoes
+    )
+    rest = np.exp(-max(train.tr_ms - echoes * train.spacing_ms, 0.0) / train.t1_ms)[:, None]
+    start = 1.0 - rest + rest * regrown.reshape(angle.shape)
+    start = start / (1.0 - rest * kept.reshape(angle.shape) * np.cos(excitation))
     return replace(train, recovered=start / start.mean(axis=1, keepdims=True))
 
 
