@@ -20,7 +20,7 @@ def measured(what, seed=1):
     return frames, regions(lie, what.plate, frames, what.spacing_mm)
 
 
-@settings(max_examples=25)
+@settings(max_examples=15)
 @given(
     rotation=st.floats(-180, 180),
     shift=st.tuples(st.floats(-5, 5), st.floats(-5, 5)),

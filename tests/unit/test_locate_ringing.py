@@ -26,7 +26,7 @@ def test_a_flat_image_stays_as_it_is():
     assert_allclose(calm(np.full((3, 9, 7), 5.0, dtype=np.float32)), 5.0, rtol=1e-6)
 
 
-@settings(max_examples=20)
+@settings(max_examples=10)
 @given(seed=st.integers(0, 999), size=st.integers(1, 40))
 def test_the_noise_of_a_mean_is_that_of_so_many_voxels(seed, size):
     rng = np.random.default_rng(seed)

@@ -1,7 +1,7 @@
 """Phase graphs of echo trains: closed forms, invariants, and brute-force isochromats as a second opinion."""
 
 import numpy as np
-from hypothesis import given
+from hypothesis import given, settings
 from hypothesis import strategies as st
 from numpy.testing import assert_allclose
 
@@ -45,6 +45,7 @@ def test_first_two_echoes_without_relaxation(angle):
     assert_allclose(echoes, [sin2, sin2 * (2 - sin2)], rtol=1e-7)
 
 
+@settings(max_examples=40)
 @given(t1_ms=times_ms, part=st.floats(0.05, 1.0), excite=angles, refocus=angles)
 def test_isochromats_agree(t1_ms, part, excite, refocus):
     t2_ms = part * t1_ms

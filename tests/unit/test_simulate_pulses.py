@@ -2,7 +2,7 @@
 
 import numpy as np
 import pytest
-from hypothesis import given
+from hypothesis import given, settings
 from hypothesis import strategies as st
 from numpy.testing import assert_allclose
 
@@ -25,6 +25,7 @@ def rotate_step_by_step(wave, angle, cycles):
     return m
 
 
+@settings(max_examples=40)
 @given(angle=st.floats(0.1, 3.1), cycles=st.floats(-4.0, 4.0), shape=st.sampled_from(SHAPES))
 def test_spinors_and_rotation_matrices_agree(angle, cycles, shape):
     wave = envelope(shape, 4.0)

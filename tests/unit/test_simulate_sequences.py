@@ -1,7 +1,7 @@
 """Sequences against closed forms and against magnetisation followed repeat by repeat."""
 
 import numpy as np
-from hypothesis import given
+from hypothesis import given, settings
 from hypothesis import strategies as st
 from numpy.testing import assert_allclose
 
@@ -51,6 +51,7 @@ def follow(t1, t2, excite, refocus, kept, ti, te, tr, repeats=40, spins=64):
     return echo
 
 
+@settings(max_examples=25)
 @given(t1_ms=times_ms, flip=st.floats(0.7, 1.2), efficiency=st.floats(0.6, 1.0))
 def test_steady_state_is_what_many_repeats_reach(t1_ms, flip, efficiency):
     t2_ms = 0.3 * t1_ms
