@@ -17,7 +17,7 @@ from qa import fit
 from qa.evidence import curves_of, picture_of
 from qa.fit.estimate import Estimate, Signals
 from qa.intake.series import Series
-from qa.locate import locate, regions
+from qa.locate import calm, independent_voxels, locate, regions
 from qa.locate.placement import NotLocated, Placement, Region
 from qa.plausible import doubts
 from qa.reading import Budget, Curve, Measurement, Picture, Reading
@@ -157,17 +157,19 @@ def _fit(one: _Scanned, plate: Plate, t1_known: dict[str, tuple[float, float]]) 
     method = fit.METHODS[scan.method]
     chosen = [one.regions[i] for i in one.fitted]
     voxels = [series.frames[:, region.rows, region.columns].T.astype(np.float64) for region in chosen]
+    calmed = calm(series.frames)  # ringing of what is around a vial stays out of its average
+    quiet = [calmed[:, region.rows, region.columns].mean(axis=1, dtype=np.float64) for region in chosen]
     times = series.ti_ms if scan.quantity is Quantity.T1 else series.te_ms
     if len(times) < method.min_samples:
         return None
     vials = [plate.vials[i] for i in one.fitted]
     t1 = np.array([t1_known.get(vial.label, (np.nan, np.nan)) for vial in vials])
     signals = Signals(
-        values=np.stack([block.mean(axis=0) for block in voxels]),
+        values=np.stack(quiet),
         times_ms=times,
         signed=series.signed,
         noise=fit.noise_of_regions(voxels, signed=series.signed),
-        voxels=np.array([len(block) for block in voxels], dtype=float),
+        voxels=np.array([independent_voxels(region.rows, region.columns) for region in chosen]),
         tr_ms=_median_or(series.tr_ms, scan.tr_ms),
         te_ms=_median_or(series.te_ms, None),
         t1_ms=t1[:, 0],

@@ -85,10 +85,10 @@ def ingest(
             earlier = book.run_files(session.run)
             whole = intake.merge(session, earlier, site) if earlier else session
             measurement, also_held = measure_session(book, site, whole, celsius)
-            held += also_held
+            held += [*whole.held, *also_held]
             whole = _without(whole, also_held)
             reason = "more files of this run arrived" if earlier else "first measured"
-            book.record(whole, measurement, method_fingerprint=fingerprint(), reason=reason)
+            book.record(whole, measurement, method_fingerprint=fingerprint(), reason=reason, only_new_files=True)
             measured[whole.run] = measurement
             used += [record.sha256 for record in whole.files]
         tell("measuring runs", len(taken.sessions), len(taken.sessions))
@@ -105,7 +105,8 @@ def ingest(
             tell("writing pages", 1, 1)
         outcomes = _outcomes(book, new, measured, front)
         scanners = scanners_today(book, site, day, trend)
-    rest = taken.seen - taken.duplicates - len(held)
+    refused = {one.sha256 for one in held}
+    rest = sum(file.sha256 not in refused for one in taken.sessions for file in one.files)
     return IngestOutcome(outcomes, tuple(held), taken.seen, rest, taken.duplicates, scanners, front)
 
 
