@@ -28,13 +28,12 @@ from qa.words import Floats, Ints, Quantity, State
 
 FIELD_SD = (0.1, 0.05, 0.05, 0.1)  # prior of the transmit field: level, slopes and bow, relative at 100 mm
 FIELD_REACH_MM = 100.0
+PROFILE_SD = 2.0  # prior of the profile's components, over their spread among the pulse pairs
 FEW_VIALS = 3  # with fewer, the field is taken to be the same for all
 GUESSED_T1_OVER_T2 = 5.0
 LONGEST_T1_MS = 4500.0  # of a liquid at room temperature, with a margin over pure water
 U_LOG_GUESSED_T1 = 0.7
-ROBUST_ROUNDS = 2
-COARSE_VIALS, COARSE_ECHOES, COARSE_STEPS = 5, 12, 6  # of the search for where to start
-COARSE_STARTS = (-1.4, -0.5, 0.4, 1.3)  # sizes of the profile's first component
+ROBUST_ROUNDS = 1
 MAP_REACH = 3.0  # a voxel's T2 is looked for within this factor of its vial's
 MAP_POINTS = 15
 
@@ -80,7 +79,8 @@ class EchoTrain:
         train, found, weights, reduced = _robust_fit(values, train, signals, start)
         size = spread(found, train, weights)
         u = found.t2_ms * np.sqrt(size.own[:, 0, 0])
-        u_model = found.t2_ms * np.hypot(np.sqrt(size.through_shared), _through_t1(found, train, weights, u_log_t1))
+        through_t1 = _through_t1(found, train, weights, u_log_t1)
+        u_model = found.t2_ms * np.hypot(np.sqrt(size.through_shared), through_t1)
         level = 1.0 + train.field @ found.shared[: train.field.shape[1]]
         covariance = np.zeros((n, 3, 3))
         turn = np.stack([found.t2_ms, found.m0], axis=1)
@@ -104,7 +104,7 @@ class EchoTrain:
                 "misfit": np.sqrt(np.mean((values - found.fitted) ** 2, axis=1)) / np.where(peak > 0, peak, 1.0),
                 "above": np.sum(found.amplitude > 2.0 * noise, axis=1),
                 "t1_known": _given(signals.t1_ms, n),
-                "u_t1_part": _through_t1(found, train, weights, u_log_t1),
+                "u_t1_part": through_t1,
                 "even": np.full(n, spacing > 0),
                 "vials": np.full(n, n),
             },
@@ -159,7 +159,7 @@ def _train(signals: Signals, spacing: float, echoes: Ints, t1: Floats, noise: fl
         x, y = signals.x_mm / FIELD_REACH_MM, signals.y_mm / FIELD_REACH_MM
         field = np.stack([np.ones(n), x, y, x * x + y * y], axis=1)
     profiles = unknown_profiles(round(float(signals.refocusing_deg), 1))
-    sd = np.concatenate([FIELD_SD[: field.shape[1]], np.ones(profiles.components.shape[1])])
+    sd = np.concatenate([FIELD_SD[: field.shape[1]], np.full(profiles.components.shape[1], PROFILE_SD)])
     usable_spacing = spacing if spacing > 0 else float(np.median(np.diff(signals.times_ms)))
     return Train(usable_spacing, echoes, t1, signals.tr_ms, noise, field, profiles, sd)
 
@@ -203,7 +203,7 @@ def _robust_fit(values: Floats, train: Train, signals: Signals, start: Floats) -
     if not signals.noise > 0:
         plain = plain / np.maximum((0.01 * np.max(np.abs(values), axis=1, keepdims=True)) ** 2, 1e-300)
     weights = plain
-    t2, shared = _coarse(values, train, weights, start)
+    t2, shared = start, np.zeros(len(train.prior_sd))
     for again in range(ROBUST_ROUNDS + 1):
         train = with_recovery(train, t2, shared)
         found = fit_jointly(values, train, weights, t2, shared)
@@ -217,40 +217,12 @@ def _robust_fit(values: Floats, train: Train, signals: Signals, start: Floats) -
     return train, found, weights, reduced
 
 
-def _coarse(values: Floats, train: Train, weights: Floats, start: Floats) -> tuple[Floats, Floats]:
-    """T2 (n,) and shared parameters to start from: the best of short descents of a few vials from several profiles."""
-    bright = np.argsort(-np.max(values, axis=1), kind="stable")[: max(COARSE_VIALS, (len(values) + 1) // 2)]
-    few = bright[np.argsort(start[bright], kind="stable")]
-    few = few[np.unique(np.linspace(0, len(few) - 1, COARSE_VIALS).round().astype(int))]
-    count = int(np.searchsorted(train.echoes, train.echoes[0] + COARSE_ECHOES))
-    part = replace(train, echoes=train.echoes[:count], t1_ms=train.t1_ms[few], field=train.field[few])
-    best: Joint | None = None
-    fields = train.field.shape[1]
-    for first in COARSE_STARTS:
-        shared = np.zeros(len(train.prior_sd))
-        shared[fields] = first
-        found = fit_jointly(
-            values[few, :count],
-            with_recovery(part, start[few], shared),
-            weights[few, :count],
-            start[few],
-            shared,
-            most_steps=COARSE_STEPS,
-        )
-        if best is None or found.total < best.total:
-            best = found
-    assert best is not None
-    return start * float(np.median(best.t2_ms / start[few])), best.shared
-
-
 def _through_t1(found: Joint, train: Train, weights: Floats, u_log_t1: Floats) -> Floats:
     """Standard uncertainty of ln T2 (n,) from that of T1."""
     step = np.where(u_log_t1 > 0, np.minimum(u_log_t1, 0.3), 0.01)
-    shape = train.shape(found.t2_ms, found.shared)[0]
-    moved = train.shape(found.t2_ms, found.shared, train.t1_ms * np.exp(step))[0]
-    moved = moved * np.sum(shape, axis=1, keepdims=True) / np.sum(moved, axis=1, keepdims=True)
-    change = found.m0[:, None] * (moved - shape)
-    return np.asarray(np.abs(moved_by(found, train, weights, change)) * u_log_t1 / step)
+    moved = replace(train, t1_ms=train.t1_ms * np.exp(step)).amplitudes(found.t2_ms, found.shared)
+    change = found.m0[:, None] * moved - found.amplitude
+    return np.asarray(np.abs(moved_by(found, weights, change)) * u_log_t1 / step)
 
 
 def _findings(found: Joint, train: Train, size: Spread) -> dict[str, float]:
@@ -296,7 +268,7 @@ def _curves(signals: Signals, of_vials: Estimate, owner: Ints, known: Ints, grid
     )
     t2 = (centre[:, None] * np.exp(grid)).ravel()
     shared = np.concatenate([[1.0], sizes])
-    shape = with_recovery(train, t2, shared).shape(t2, shared)[0]
+    shape = with_recovery(train, t2, shared).amplitudes(t2, shared)
     return shape.reshape(len(known), points, -1)
 
 

@@ -24,7 +24,7 @@ from qa.words import Floats
 LEVELS = (0.85, 1.0)  # transmit field over nominal; in between and beyond, shares are taken to be linear in it
 NODES = 18  # refocusing angles, in units of the angle on resonance
 SMALLEST = 0.05
-COMPONENTS = 8
+COMPONENTS = 12
 RATIOS = np.array([0.65, 0.8, 1.0, 1.25, 1.6, 2.2, 3.5])  # width of the refocused over that of the excited slice
 EXCITING: tuple[Pulse, ...] = (
     *(Pulse("sinc", bandwidth, window) for bandwidth in (2.0, 4.0, 6.0) for window in (0.0, 0.46)),
