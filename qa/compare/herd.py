@@ -10,7 +10,8 @@ import numpy as np
 from qa.compare.agreement import Departure
 from qa.compare.slabs import Slab
 from qa.compare.tables import day_of
-from qa.trend.change import Change, find_changes, measure, wild
+from qa.trend.change import Change, measure, wild
+from qa.trend.changes import find_changes
 from qa.trend.levels import common_level
 from qa.words import Floats, Ints
 

@@ -9,7 +9,7 @@ import numpy as np
 from qa.trend.streams import Block, Bools, Stamps
 from qa.words import Floats
 
-# The Hodges-Lehmann mean keeps 95 % of the efficiency of the plain mean and stands one bad set-up in four runs.
+# The Hodges-Lehmann mean keeps 95 % of the efficiency of the plain mean, and is hardly moved by one bad set-up.
 LOSS = 1.0 / 0.955
 
 
@@ -57,6 +57,21 @@ def nanmedian(values: Floats) -> Floats:
     return np.where(count > 0, middle.mean(axis=0), np.nan)
 
 
+def robust_mean(values: Floats, used: Bools) -> Floats:
+    """Hodges-Lehmann mean of the used values of each column: (r, S), (r, S) -> (S,); NaN where none is used.
+
+    A value farther than five robust sigmas from the median has no part in it.
+    """
+    order = np.cumsum(used, axis=0)
+    packed = np.full((int(order.max(initial=0)), values.shape[1]), np.nan)  # only the used ones, moved to the top
+    rows, columns = np.nonzero(used)
+    packed[order[rows, columns] - 1, columns] = values[rows, columns]
+    middle = nanmedian(packed)
+    distance = np.abs(packed - middle)
+    bound = 5.0 * 1.4826 * nanmedian(distance) + 1e-9 * np.abs(middle)
+    return hodges_lehmann(np.where(distance <= bound, packed, np.nan))
+
+
 def segments(block: Block, restarted: Stamps, baseline_runs: int) -> tuple[Segment, ...]:
     """Cuts a block at its restarts and sets each stream's baseline in each part."""
     part = np.searchsorted(restarted, block.acquired, side="right")
@@ -75,10 +90,7 @@ def _segment(block: Block, first: int, last: int, since: np.datetime64 | None, b
     used = usable & (order <= baseline_runs)
     depth = int(np.flatnonzero(used.any(axis=1)).max(initial=-1)) + 1
     learnt = np.where(used, value, np.nan)[:depth]
-    packed = np.full((baseline_runs, value.shape[1]), np.nan)  # only the used readings, moved to the top
-    rows, columns = np.nonzero(used)
-    packed[order[rows, columns] - 1, columns] = value[rows, columns]
-    mean = hodges_lehmann(packed)
+    mean = robust_mean(value, used)
     known = (order - usable) >= baseline_runs
     return Segment(
         first,

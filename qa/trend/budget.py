@@ -20,7 +20,8 @@ from qa.trend.widths import width_of
 from qa.words import Floats
 
 WEIGHT = 0.2  # lambda of all smoothed charts: near the best for shifts of one sigma
-CUT = 3.0  # a value counts for at most three sigmas, so that one wild run is no drift
+CUT = 3.0  # a value farther out counts for so much where the run before lies on the same side, else for nothing
+CONFIRMS = 2.5  # sigmas by which the run before must lie on the same side
 _LOSS = 1.0 / 0.955
 
 
@@ -68,12 +69,12 @@ _GRID = (4.0, 6.0, 8.0, 12.0, 20.0, 40.0, 120.0, float("inf"))
 def smooth(series: Chartable, arl: float) -> Smoothed:
     """EWMA chart of a level (r,) or of residuals (r, S) whose baseline and scatter were estimated.
 
-    Values are cut at three sigmas, and a signal needs two of the last three runs on its own side: one run alone
-    never makes a drift.
+    A value beyond three sigmas is left out unless the run before confirms it, and a signal needs two of the last
+    three runs on its own side: one run alone never makes a drift.
     """
-    z = np.clip(series.percent / series.sd, -CUT, CUT)
-    level = ewma_level(z, WEIGHT)
-    count = np.cumsum(np.isfinite(z), axis=0).astype(np.float64)
+    z, counting = _tamed(series.percent / series.sd)
+    level = ewma_level(np.where(counting, z, np.nan), WEIGHT)
+    count = np.cumsum(counting, axis=0).astype(np.float64)
     runs = np.maximum(series.runs, 1.0) / _LOSS
     kept = 1.0 - (1.0 - WEIGHT) ** count
     spread = np.sqrt(ewma_spread(WEIGHT, count) ** 2 + kept**2 / runs)
@@ -84,13 +85,24 @@ def smooth(series: Chartable, arl: float) -> Smoothed:
     limit = widths * spread
     side = np.sign(level)
     with np.errstate(invalid="ignore"):
-        agreeing = (z * side > 0.5).astype(np.int8)
+        agreeing = (counting & (z * side > 0.5)).astype(np.int8)
     recent = agreeing.copy()
     recent[1:] += agreeing[:-1]
     recent[2:] += agreeing[:-2]
     signal = np.isfinite(z) & (np.abs(level) > limit) & (recent >= 2)
     started = count > 0
     return Smoothed(np.where(started, level * series.sd, np.nan), np.where(started, limit * series.sd, np.nan), signal)
+
+
+def _tamed(z: Floats) -> tuple[Floats, Bools]:
+    """Values cut at three sigmas, and which of them count: finite ones that are not wild all alone."""
+    here = np.isfinite(z)
+    newest = np.maximum.accumulate(np.where(here, np.arange(len(z)).reshape(-1, *[1] * (z.ndim - 1)), -1), axis=0)
+    before = np.full_like(z, np.nan)
+    before[1:] = np.where(newest[:-1] >= 0, np.take_along_axis(z, np.maximum(newest[:-1], 0), axis=0), np.nan)
+    with np.errstate(invalid="ignore"):
+        alone = (np.abs(z) > CUT) & ~(before * np.sign(z) > CONFIRMS)
+    return np.clip(z, -CUT, CUT), here & ~alone
 
 
 def beyond_chance(probability: float, freedom: Floats) -> Floats:

@@ -17,6 +17,7 @@ from qa.trend.streams import Bools, Ints
 from qa.words import Floats
 
 Kind = Literal["step", "slope"]
+KINDS: tuple[Kind, ...] = ("step", "slope")
 YEAR = 365.25
 FEWEST_AFTER_STEP = 3
 FEWEST_AFTER_SLOPE = 5
@@ -41,6 +42,7 @@ class Change:
     freedom: float
     chance: float  # probability that an unchanged series shows as much anywhere
     favour: float  # log likelihood of this kind over the other kind
+    inflation: float  # of variances by autocorrelation of what is left; 1: none seen
 
     def at(self, t: Floats) -> Floats:
         """What the change adds to values at times `t` (days), percent."""
@@ -83,7 +85,7 @@ def _regressor(kind: Kind, t: Floats, onset: Floats) -> Floats:
     return np.clip(t[:, None] - onset, 0.0, None) / YEAR
 
 
-def _centred(x: Floats, weight: Floats, group: Ints) -> Floats:
+def centred(x: Floats, weight: Floats, group: Ints) -> Floats:
     """Takes the weighted mean of each group out of every column."""
     out = np.empty_like(x)
     for number in np.unique(group):
@@ -157,7 +159,15 @@ def _after(values: Floats) -> Floats:
     return np.concatenate([np.cumsum(values[::-1])[::-1], [0.0]])
 
 
-def find_change(t: Floats, y: Floats, sd: Floats, group: Ints | None = None) -> Change | None:
+def find_change(
+    t: Floats,
+    y: Floats,
+    sd: Floats,
+    group: Ints | None = None,
+    *,
+    kinds: tuple[Kind, ...] = KINDS,
+    least_inflation: float = 1.0,
+) -> Change | None:
     """The best single change of a series, however weak; its `chance` says whether to believe it.
 
     Parameters
@@ -166,6 +176,8 @@ def find_change(t: Floats, y: Floats, sd: Floats, group: Ints | None = None) -> 
     y : (n,) float64, percent, finite
     sd : (n,) float64, relative standard uncertainties
     group : (n,) integers; each group has its own level before the change
+    kinds : to choose from
+    least_inflation : what is known otherwise of the inflation of variances by autocorrelation
 
     Returns
     -------
@@ -177,11 +189,9 @@ def find_change(t: Floats, y: Floats, sd: Floats, group: Ints | None = None) -> 
     freedom = float(t.size - groups - 2)
     if t.size < 7 or freedom < 3:
         return None
-    y0 = _centred(y[:, None], weight, group)[:, 0]
+    y0 = centred(y[:, None], weight, group)[:, 0]
     rss0 = float(weight @ (y0 * y0))
-    found = [
-        s for s in (_search("step", t, y0, weight, group), _search("slope", t, y0, weight, group)) if s is not None
-    ]
+    found = [s for s in (_search(kind, t, y0, weight, group) for kind in kinds) if s is not None]
     if not found or rss0 <= 0:
         return None
     best = max(found, key=lambda s: float(s.gain.max()))
@@ -191,8 +201,8 @@ def find_change(t: Floats, y: Floats, sd: Floats, group: Ints | None = None) -> 
     scale = rss / freedom
 
     x = _regressor(best.kind, t, best.onset[[k]])
-    fitted = _centred(x, weight, group)[:, 0] * best.size[k]
-    inflation = _inflation(t, (y0 - fitted) * np.sqrt(weight), group)
+    fitted = centred(x, weight, group)[:, 0] * best.size[k]
+    inflation = max(_inflation(t, (y0 - fitted) * np.sqrt(weight), group), least_inflation)
     z = float(np.sqrt(freedom * np.log1p(best.gain[k] / scale / inflation / freedom)))
     chance = peak_chance(z, np.unique(t).size, FEWEST_BEFORE)
 
@@ -219,6 +229,7 @@ def find_change(t: Floats, y: Floats, sd: Floats, group: Ints | None = None) -> 
         freedom,
         chance,
         favour,
+        inflation,
     )
 
 
@@ -230,6 +241,27 @@ def _inflation(t: Floats, white: Floats, group: Ints) -> float:
         products += float(ordered[1:] @ ordered[:-1])
     rho = products / squares if squares > 0 else 0.0
     rho = min(rho, 0.8) if rho > 1.65 / np.sqrt(white.size) else 0.0
+    return (1.0 + rho) / (1.0 - rho)
+
+
+def inflation_of_differences(t: Floats, white: Floats, group: Ints) -> float:
+    """The same from differences of neighbours and second neighbours, which hardly see a change of level.
+
+    Their mean squares, each difference cut at 2.5 sigmas, stand as 1 to 1 + rho; the estimate has an SD of about
+    1.4 / sqrt(n) in white noise.
+    """
+    near, far = [], []
+    for number in np.unique(group):
+        ordered = white[group == number][np.argsort(t[group == number], kind="stable")]
+        near.append(np.abs(np.diff(ordered)))
+        far.append(np.abs(ordered[2:] - ordered[:-2]))
+    first, second = np.concatenate(near), np.concatenate(far)
+    if second.size < 3:
+        return 1.0
+    bound = 2.5 * 1.4826 * max(float(np.median(first)), float(np.median(second)))
+    below = float(np.mean(np.minimum(first, bound) ** 2))
+    rho = float(np.mean(np.minimum(second, bound) ** 2)) / below - 1.0 if below > 0 else 0.0
+    rho = min(rho, 0.8) if rho > 1.4 / np.sqrt(white.size) else 0.0
     return (1.0 + rho) / (1.0 - rho)
 
 
@@ -272,8 +304,8 @@ def measure(
     if t.size < 4:
         return float("nan"), float("nan")
     weight = 1.0 / sd**2
-    x = _centred(_regressor(kind, t, np.array([onset])), weight, group)[:, 0]
-    y0 = _centred(y[:, None], weight, group)[:, 0]
+    x = centred(_regressor(kind, t, np.array([onset])), weight, group)[:, 0]
+    y0 = centred(y[:, None], weight, group)[:, 0]
     power = float(weight @ (x * x))
     if power <= 1e-9:
         return float("nan"), float("nan")
@@ -281,33 +313,3 @@ def measure(
     rest = y0 - size * x
     scale = max(float(weight @ (rest * rest)) / max(t.size - np.unique(group).size - 1, 1), 0.25)
     return size, float(np.sqrt(scale / power))
-
-
-def find_changes(
-    t: Floats, y: Floats, sd: Floats, group: Ints | None = None, *, alpha: float, most: int = 3
-) -> tuple[Change, ...]:
-    """Changes one after another, each believed only if chance gives it with less than `alpha`; in order of onset.
-
-    After each new one, all are fitted again with the others taken out.
-    """
-    found: list[Change] = []
-    rest = y
-    while len(found) < most:
-        change = find_change(t, rest, sd, group)
-        if change is None or change.chance > alpha:
-            break
-        found.append(change)
-        if len(found) > 1:
-            found = _refined(found, t, y, sd, group, alpha)
-        rest = y - np.sum([c.at(t) for c in found], axis=0)
-    return tuple(sorted(found, key=lambda c: c.onset))
-
-
-def _refined(found: list[Change], t: Floats, y: Floats, sd: Floats, group: Ints | None, alpha: float) -> list[Change]:
-    for _ in range(2):
-        for place in range(len(found)):
-            others = [c.at(t) for number, c in enumerate(found) if number != place]
-            again = find_change(t, y - np.sum(others, axis=0), sd, group)
-            if again is not None and again.chance <= alpha:
-                found[place] = again
-    return found

@@ -17,7 +17,8 @@ from qa.site.limits import LimitBlock, in_force
 from qa.trend.attribute import ask, why_level, why_vial
 from qa.trend.baseline import Segment, segments
 from qa.trend.budget import Promise
-from qa.trend.change import Change, find_change, find_changes
+from qa.trend.change import Change, find_change
+from qa.trend.changes import find_changes
 from qa.trend.findings import Cause, Finding, FindingState, day_of, key
 from qa.trend.forecast import forecast
 from qa.trend.levels import FEWEST_VIALS, lanes

@@ -11,7 +11,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from qa.trend.baseline import LOSS, Segment, nanmedian
+from qa.trend.baseline import LOSS, Segment, nanmedian, robust_mean
 from qa.trend.streams import Bools, Ints
 from qa.words import Floats
 
@@ -90,7 +90,7 @@ def _later_variance(values: Floats, judged: Bools, clip: Floats) -> tuple[Floats
     """Half the squared successive differences known before each run: sum and degrees of freedom, (r, S) each.
 
     Differences see scatter but hardly a drift or step (von Neumann 1941, Ann. Math. Stat. 12, 367-395); each is
-    cut at four sigmas, and counts two thirds of a degree of freedom.
+    cut at four sigmas (of the variances `clip`, (S,) or (r, S)), and counts two thirds of a degree of freedom.
     """
     sums, counts = np.zeros_like(values), np.zeros_like(values)
     if len(values) < 2:
@@ -100,7 +100,7 @@ def _later_variance(values: Floats, judged: Bools, clip: Floats) -> tuple[Floats
     before, later = newest[:-1], values[1:]
     pair = fresh[1:] & (before >= 0)
     earlier = np.take_along_axis(values, np.maximum(before, 0), axis=0)
-    half = np.minimum(0.5 * (np.where(pair, later - earlier, 0.0)) ** 2, 16.0 * clip)
+    half = np.minimum(0.5 * np.where(pair, later - earlier, 0.0) ** 2, 16.0 * np.broadcast_to(clip, values.shape)[1:])
     sums[2:] = np.cumsum(half * (2.0 / 3.0), axis=0)[:-1]
     counts[2:] = np.cumsum(pair * (2.0 / 3.0), axis=0)[:-1]
     return sums, counts
@@ -124,7 +124,7 @@ def _lane(segment: Segment, scan: str, quantity: str, columns: Ints) -> Lane:
 
     level = common_level(seen, typical)
     residual = percent - level[:, None] if apart else percent
-    centre = np.nan_to_num(_masked_mean(residual, used))
+    centre = np.nan_to_num(robust_mean(residual, used & np.isfinite(residual)))
     residual = residual - centre
     own, own_freedom = _window_variance(residual, used)
     ratio = nanmedian((own / typical**2)[:, None])
@@ -148,25 +148,18 @@ def _lane(segment: Segment, scan: str, quantity: str, columns: Ints) -> Lane:
     )
 
 
-def _masked_mean(values: Floats, mask: Bools) -> Floats:
-    there = mask & np.isfinite(values)
-    number = there.sum(axis=0)
-    mean: Floats = np.where(there, values, 0.0).sum(axis=0) / np.where(number > 0, number, np.nan)
-    return mean
-
-
 def _level_chart(level: Floats, known: Bools, variance: Floats, excess: Floats) -> Chartable:
     half = known.sum(axis=1) * 2 >= known.shape[1]
     start = int(half.argmax()) if half.any() else len(level)
     window = (np.arange(len(level)) < start) & np.isfinite(level)
     count = float(window.sum())
-    level = level - (level[window].mean() if count else 0.0)
+    level = level - (float(robust_mean(level[:, None], window[:, None])[0]) if count else 0.0)
     base, freedom = _window_variance(level[:, None], window[:, None])
     floor = 1.0 / np.nansum(1.0 / variance, axis=1)  # noise of the vials alone
-    base = np.where(np.isfinite(base), base, floor.max(initial=1.0))
+    known_base = np.where(np.isfinite(base), base, floor)
     judged = ~window & (np.arange(len(level)) >= start)
-    later, later_freedom = _later_variance(level[:, None], judged[:, None], np.maximum(base, floor.max(initial=0.0)))
-    total = (freedom * base + later[:, 0]) / np.maximum(freedom + later_freedom[:, 0], 1.0)
+    later, later_freedom = _later_variance(level[:, None], judged[:, None], np.maximum(known_base, floor)[:, None])
+    total = (freedom * known_base + later[:, 0]) / np.maximum(freedom + later_freedom[:, 0], 1.0)
     sd = np.sqrt(np.maximum(total, floor) + excess)
     return Chartable(
         np.where(judged, level, np.nan), sd, np.maximum(freedom + later_freedom[:, 0], 1.0), np.array(count)

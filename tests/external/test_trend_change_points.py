@@ -6,7 +6,8 @@ import numpy as np
 import pytest
 from scipy import stats
 
-from qa.trend.change import find_change, find_changes, measure
+from qa.trend.change import find_change, measure
+from qa.trend.changes import find_changes
 
 # Annual flow of the Nile at Aswan 1871-1970, 1e8 cubic metres: Cobb (1978), Biometrika 65, 243-251;
 # Durbin and Koopman (2001), Time Series Analysis by State Space Methods
