@@ -134,7 +134,9 @@ def fit_magnitude_decays(magnitudes: Floats, times: Floats, floor: float = 0.0) 
     decays : of the best polarity, with the final value a made positive
     flips : (n,), how many first samples were negative before that
     """
-    parts = [_best_of(magnitudes[i : i + CHUNK_ROWS], times, floor) for i in range(0, len(magnitudes), CHUNK_ROWS)]
+    parts = [
+        _best_of(magnitudes[i : i + CHUNK_ROWS], times, floor) for i in range(0, max(len(magnitudes), 1), CHUNK_ROWS)
+    ]
     rate, offset, amplitude, rss, flips = (np.concatenate(columns) for columns in zip(*parts, strict=True))
     return Decays(rate, offset, amplitude, rss), flips
 

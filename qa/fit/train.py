@@ -48,7 +48,7 @@ class Train:
         n, q = share.shape
         t1, t2 = np.repeat(self.t1_ms, q), np.repeat(t2_ms, q)
         amplitude = echo_train(angle.ravel(), self.spacing_ms, t1, t2, int(self.echoes[-1]))[0]
-        kept = amplitude[self.echoes - 1].reshape(-1, n, q)
+        kept = amplitude[self.echoes - 1].reshape(len(self.echoes), n, q)
         return np.asarray(np.einsum("mnq,nq->nm", kept, scale * share))
 
     def slopes(self, t2_ms: Floats, shared: Floats) -> tuple[Floats, Floats, Floats]:
@@ -57,7 +57,7 @@ class Train:
         n, q = share.shape
         t1, t2 = np.repeat(self.t1_ms, q), np.repeat(t2_ms, q)
         trains = echo_train(angle.ravel(), self.spacing_ms, t1, t2, int(self.echoes[-1]), slopes=True)
-        amplitude, by_angle, by_t2 = (a[self.echoes - 1].reshape(-1, n, q) for a in trains)
+        amplitude, by_angle, by_t2 = (a[self.echoes - 1].reshape(len(self.echoes), n, q) for a in trains)
         by_level = (by_angle - amplitude * (0.5 / np.tan(angle / 2.0))) * (scale * share * self.profiles.angle)
         amplitude = amplitude * scale
         along_level = np.sum(by_level + amplitude * share_by_level, axis=2).T

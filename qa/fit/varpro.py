@@ -75,7 +75,7 @@ def fit(
     """
     values = np.atleast_2d(np.asarray(values, float))
     parts = []
-    for first in range(0, len(values), CHUNK_ROWS):
+    for first in range(0, max(len(values), 1), CHUNK_ROWS):
         rows = slice(first, first + CHUNK_ROWS)
         weight = None if weights is None else np.broadcast_to(weights, values.shape)[rows]
         start = grid[grid_search(values[rows], basis(grid)[0])]
