@@ -211,7 +211,7 @@ def write_report(
     runs : write only these run pages, and those that are missing; absent: all
     single_file : every page whole in itself, to be mailed
     """
-    from qa.report import write_pages
+    from qa.report.pages import write_pages
 
     folder = out or site.pages
     day = today or datetime.now(site.timezone).date()

@@ -119,7 +119,7 @@ class EchoTrain:
             shared=_findings(found, train, size),
         )
 
-    def map(self, signals: Signals, of_vials: Estimate, vial: Floats) -> Floats:
+    def map(self, signals: Signals, of_vials: Estimate, vial: Ints) -> Floats:
         """T2 of each voxel, ms, with its vial's transmit level and the run's profile held.
 
         NaN where the vial has no T2, or the voxel's lies beyond a factor of three from it.

@@ -8,7 +8,7 @@ from typing import Protocol
 
 import numpy as np
 
-from qa.words import Floats, Quantity, State
+from qa.words import Floats, Ints, Quantity, State
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -76,7 +76,7 @@ class FitMethod(Protocol):
         """Fit vial averages."""
         ...
 
-    def map(self, signals: Signals, of_vials: Estimate, vial: Floats) -> Floats:
+    def map(self, signals: Signals, of_vials: Estimate, vial: Ints) -> Floats:
         """Value per voxel in ms (n,), NaN where it fails; `vial` (n,) gives each voxel's row in `of_vials`."""
         ...
 

@@ -98,7 +98,7 @@ class MultiEcho:
             fitted=found.fitted,
         )
 
-    def map(self, signals: Signals, of_vials: Estimate, vial: Floats) -> Floats:
+    def map(self, signals: Signals, of_vials: Estimate, vial: Ints) -> Floats:
         """T2 of each voxel, ms, NaN where the fit fails."""
         check_signals(signals, self.min_samples)
         values = usable(signals)

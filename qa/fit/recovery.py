@@ -102,7 +102,7 @@ class Recovery:
             shared=self._shared(parameters, covariance, facts),
         )
 
-    def map(self, signals: Signals, of_vials: Estimate, vial: Floats) -> Floats:
+    def map(self, signals: Signals, of_vials: Estimate, vial: Ints) -> Floats:
         """T1 of each voxel, ms, NaN where it lies outside the range of these TIs; each voxel stands by itself."""
         check_signals(signals, self.min_samples)
         values = usable(signals)
