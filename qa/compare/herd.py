@@ -122,7 +122,7 @@ def _of_scanner(name: str, scan: str, quantity: str, series: Sequence[_Series], 
     changes = find_changes(days, apart, u, groups, alpha=alpha)
     told = []
     for number, change in enumerate(changes):
-        if abs(change.size) < LEAST_PERCENT or not _moved_itself(change, mine):
+        if abs(change.size) < LEAST_PERCENT or not _moved_itself(change, mine, changes):
             continue
         undone = _undone(change, changes[number + 1 :])
         told.append(
@@ -140,12 +140,13 @@ def _of_scanner(name: str, scan: str, quantity: str, series: Sequence[_Series], 
     return [one for one in told if not _only_a_return(one, told)]
 
 
-def _moved_itself(change: Change, mine: Sequence[_Series]) -> bool:
+def _moved_itself(change: Change, mine: Sequence[_Series], changes: Sequence[Change]) -> bool:
     """Whether the scanner's own level changed with the difference: else one of the others moved, not it."""
     expected = change.size if change.kind == "step" else change.rate
     sizes, weights = [], []
+    along = [other for other in changes if other is not change]
     for one in mine:
-        size, u = measure(change.kind, change.onset, one.days, one.level, np.full(one.days.size, one.sd))
+        size, u = measure(change, one.days, one.level, np.full(one.days.size, one.sd), along=along)
         if np.isfinite(size) and u > 0:
             sizes.append(size)
             weights.append(1.0 / u**2)

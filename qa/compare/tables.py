@@ -231,7 +231,7 @@ def _pair(a: str, b: str, made: Sequence[Slab]) -> Pair:
     not_given: dict[str, str] = {}
     if not x_percent:
         reason = "they share no vial of one phantom"
-        return _empty_pair(a, b, {"bias_percent": reason, "concordance": reason})
+        return _empty_pair(a, b, dict.fromkeys(("bias_percent", "lower_limit_percent", "concordance"), reason))
     x, y, scale = np.array(x_percent), np.array(y_percent), np.array(nominal)
     repeats = [_repeats(side) for side in sides]
     if any(one is None for one in repeats):

@@ -7,7 +7,8 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from qa.trend.change import Change, find_change, measure
+from qa.trend.change import Change, measure
+from qa.trend.changes import find_changes
 from qa.trend.findings import Cause
 from qa.trend.pooled import Course
 from qa.words import Floats
@@ -24,31 +25,38 @@ class Witness:
     answer: str  # "moved", "still" or "cannot say"
 
 
-def ask(change: Change, course: Course, series: Floats, sd: Floats) -> Witness:
-    """Whether `series` of `course` moved as `change` did, from its size estimated for the same onset and shape."""
+def ask(change: Change, course: Course, series: Floats, sd: Floats, along: Sequence[Change] = ()) -> Witness:
+    """Whether `series` of `course` moved as `change` did, from its size estimated for the same onset and shape.
+
+    `along` are the other changes found with it: a fault that was mended is two.
+    """
     here = np.isfinite(series)
     kind, expected = change.kind, change.size if change.kind == "step" else change.rate
-    size, u = measure(kind, change.onset, course.days[here], series[here], sd[here])
+    size, u = measure(change, course.days[here], series[here], sd[here], along=along)
     unit = "%" if kind == "step" else "% a year"
     if not np.isfinite(size):
         return Witness(course, size, u, unit, "cannot say")
-    along, u_along = size / expected, u / abs(expected)
-    if along - 1.645 * u_along > 0.15 and along + 1.645 * u_along > 0.5:
+    share, u_share = size / expected, u / abs(expected)
+    if share - 1.645 * u_share > 0.15 and share + 1.645 * u_share > 0.5:
         return Witness(course, size, u, unit, "moved")
-    if along + 1.645 * u_along < 0.5:
+    if share + 1.645 * u_share < 0.5:
         return Witness(course, size, u, unit, "still")
     return Witness(course, size, u, unit, "cannot say")
 
 
-def why_level(change: Change, course: Course, others: Sequence[Course]) -> tuple[Cause, tuple[str, ...], list[Course]]:
+def why_level(
+    change: Change, course: Course, others: Sequence[Course], along: Sequence[Change] = ()
+) -> tuple[Cause, tuple[str, ...], list[Course]]:
     """The cause of a change shared by all vials of a course; also the courses that moved with it."""
     same = [o for o in others if o is not course and o.scan == course.scan and o.current == course.current]
-    on_scanner = [ask(change, o, o.level, o.level_sd) for o in same if o.scanner == course.scanner]
+    on_scanner = [ask(change, o, o.level, o.level_sd, along) for o in same if o.scanner == course.scanner]
     of_phantom = [
-        ask(change, o, o.level, o.level_sd) for o in same if o.phantom == course.phantom and o.scanner != course.scanner
+        ask(change, o, o.level, o.level_sd, along)
+        for o in same
+        if o.phantom == course.phantom and o.scanner != course.scanner
     ]
     reasons = [f"All {len(course.labels)} vials moved together."]
-    temperature = _temperature(change, course)
+    temperature = _temperature(change, course, along)
     if temperature is not None:
         return "temperature", (*reasons, temperature), []
     with_it = [w.course for w in (*on_scanner, *of_phantom) if w.answer == "moved"]
@@ -85,7 +93,7 @@ def _said(witness: Witness, name: str) -> str:
     return f"{name} {verb} ({witness.size:+.1f} ± {witness.u:.1f} {witness.unit}, same onset and shape)."
 
 
-def _temperature(change: Change, course: Course) -> str | None:
+def _temperature(change: Change, course: Course, along: Sequence[Change]) -> str | None:
     """A sentence, if the temperature explains the change; None if it does not."""
     here = np.isfinite(course.level) & ~course.wild_run
     t, y, celsius, sd = course.days[here], course.level[here], course.celsius[here], course.level_sd[here]
@@ -106,13 +114,13 @@ def _temperature(change: Change, course: Course) -> str | None:
     centred = y[known] - np.average(y[known], weights=weight)
     x = x - np.average(x, weights=weight)
     per_k = float((weight * x) @ centred / (weight @ (x * x)))
-    without = find_change(t[known], y[known] - per_k * x, sd[known])
+    without = find_changes(t[known], y[known] - per_k * x, sd[known], alpha=0.01)
     total = float(weight @ centred**2)
     by_temperature = per_k**2 * float(weight @ (x * x)) / total
-    part = change.at(t[known])
+    part = np.sum([one.at(t[known]) for one in (change, *along)], axis=0)
     rest = centred - (part - np.average(part, weights=weight))
     by_change = 1.0 - float(weight @ rest**2) / total
-    if by_temperature > by_change and (without is None or without.chance > 0.01):
+    if by_temperature > by_change and not without:
         return f"The level follows the phantom's temperature ({per_k:+.1f} % per kelvin left after correction)."
     return None
 

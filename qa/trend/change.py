@@ -7,6 +7,7 @@ series itself; only relative uncertainties are taken from the caller.
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import Literal
 
@@ -294,22 +295,41 @@ def _onset_set(search: _Search, mass: Floats, t: Floats) -> tuple[float, float]:
 
 
 def measure(
-    kind: Kind, onset: float, t: Floats, y: Floats, sd: Floats, group: Ints | None = None
+    change: Change,
+    t: Floats,
+    y: Floats,
+    sd: Floats,
+    group: Ints | None = None,
+    *,
+    along: Sequence[Change] = (),
 ) -> tuple[float, float]:
-    """The height (step, percent) or rate (slope, percent per year) of a change of known onset, and its uncertainty.
+    """How much a series moved as `change` did elsewhere, and its standard uncertainty.
 
+    Parameters
+    ----------
+    change : its kind and onset are taken, its size is measured: a step's height in percent, a slope's percent a year
+    along : other changes that the series may have, too; theirs are fitted with it
+
+    Returns
+    -------
     NaN where the series cannot tell (no run before or after).
     """
     group = np.zeros(t.size, dtype=np.intp) if group is None else group
-    if t.size < 4:
+    if t.size < 4 + len(along):
         return float("nan"), float("nan")
     weight = 1.0 / sd**2
-    x = centred(_regressor(kind, t, np.array([onset])), weight, group)[:, 0]
-    y0 = centred(y[:, None], weight, group)[:, 0]
-    power = float(weight @ (x * x))
-    if power <= 1e-9:
+    root = np.sqrt(weight)[:, None]
+    shapes = [_regressor(one.kind, t, np.array([one.onset]))[:, 0] for one in (change, *along)]
+    columns = centred(np.column_stack([*shapes, y]), weight, group) * root
+    if along:
+        others = columns[:, 1:-1]
+        factors, *_ = np.linalg.lstsq(others, columns[:, [0, -1]], rcond=1e-6)
+        columns = columns[:, [0, -1]] - others @ factors
+    x, rest = columns[:, 0], columns[:, -1]
+    power = float(x @ x)
+    if power <= 1e-9 * float(weight.sum()):
         return float("nan"), float("nan")
-    size = float((weight * x) @ y0) / power
-    rest = y0 - size * x
-    scale = max(float(weight @ (rest * rest)) / max(t.size - np.unique(group).size - 1, 1), 0.25)
+    size = float(x @ rest) / power
+    left = rest - size * x
+    scale = max(float(left @ left) / max(t.size - np.unique(group).size - 1 - len(along), 1), 0.25)
     return size, float(np.sqrt(scale / power))

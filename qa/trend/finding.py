@@ -167,27 +167,32 @@ class _Finder:
         several = len({c.scanner for c in family}) > 1
         findings: list[Finding] = []
         rest = {id(c): _own(c, label) for c in family}
-        for change in _changes(family, rest, self.vial_alpha):
-            findings += self._vial_change(label, change, family, rest, several)
+        shared = _changes(family, rest, self.vial_alpha)
+        for change in shared:
+            findings += self._vial_change(label, change, shared, family, rest, several)
         if several:  # in one scanner only
             for course in family:
                 series = rest[id(course)] - np.sum([c.at(course.days) for c in course.aged.get(label, [])], axis=0)
-                for change in _changes([course], {id(course): series}, self.vial_alpha):
-                    findings += self._vial_change(label, change, family, {**rest, id(course): series}, several, course)
+                own = _changes([course], {id(course): series}, self.vial_alpha)
+                for change in own:
+                    left = {**rest, id(course): series}
+                    findings += self._vial_change(label, change, own, family, left, several, course)
         return findings
 
     def _vial_change(
         self,
         label: str,
         change: Change,
+        changes: Sequence[Change],
         family: list[Course],
         rest: dict[int, Floats],
         several: bool,
         only: Course | None = None,
     ) -> list[Finding]:
         crossing = [c for c in family if c.days[-1] >= change.onset and c.days[0] < change.onset]
+        along = [other for other in changes if other is not change]
         answers = [
-            ask(change, c, rest[id(c)], np.full(len(c.days), c.sd[c.labels.index(label)]))
+            ask(change, c, rest[id(c)], np.full(len(c.days), c.sd[c.labels.index(label)]), along)
             for c in crossing
             if c is not only
         ]
@@ -195,6 +200,10 @@ class _Finder:
         still = [w.course for w in answers if w.answer == "still"]
         if not moved:
             moved = crossing[:1] or family[:1]
+        if still and only is None:  # its size is that on the scanners where it moved
+            change = min(
+                _changes(moved, rest, self.vial_alpha), key=lambda one: abs(one.onset - change.onset), default=change
+            )
         watch = self._limits(moved[0], (label,))[0]
         if abs(change.size) < RELEVANT * watch:
             return []
@@ -220,7 +229,8 @@ class _Finder:
         for number, (change, course) in enumerate(found):
             if number in taken:
                 continue
-            cause, reasons, with_it = why_level(change, course, self.courses)
+            along = [other for other, where in found if where is course and other is not change]
+            cause, reasons, with_it = why_level(change, course, self.courses, along)
             together = [course]
             if cause in ("scanner", "phantom"):
                 together += with_it

@@ -1,5 +1,7 @@
 """The search for changes against plain least squares, its invariances, and its false alarms."""
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 from hypothesis import given, settings
@@ -130,9 +132,19 @@ def test_a_constant_series_has_no_change():
 
 
 def test_measuring_where_there_is_no_run_before_gives_nothing():
-    size, u = measure("step", -1.0, WEEKS, np.ones(40), np.ones(40))
+    before_all = replace(find_change(WEEKS, np.arange(40.0) > 20, np.ones(40)), onset=-1.0)
+    size, u = measure(before_all, WEEKS, np.ones(40), np.ones(40))
     assert np.isnan(size)
     assert np.isnan(u)
+
+
+def test_a_fault_is_measured_together_with_its_mending():
+    y = 0.2 * np.random.default_rng(16).standard_normal(40) + 2.0 * ((np.arange(40) >= 10) & (np.arange(40) < 16))
+    there, back = find_changes(WEEKS, y, np.full(40, 0.2), alpha=1e-3)
+    alone, _ = measure(there, WEEKS, y, np.full(40, 0.2))
+    together, u = measure(there, WEEKS, y, np.full(40, 0.2), along=[back])
+    assert alone < 1.0
+    assert together == pytest.approx(2.0, abs=4 * u)
 
 
 @given(st.integers(0, 39), st.sampled_from([-1.0, 1.0]), st.floats(10.0, 1e4))
