@@ -144,7 +144,7 @@ def echo_numbers(times_ms: Floats) -> tuple[float, Ints]:
     """
     steps = np.diff(times_ms)
     least = float(np.min(steps[steps > 0]))
-    for part in (1.0, 2.0, 3.0, 4.0):
+    for part in (1.0, 2.0, 3.0):
         number = np.rint(times_ms * part / least)
         spacing = float(times_ms @ number / (number @ number)) if number[0] >= 1 else 0.0
         if spacing > 0 and np.all(np.abs(times_ms - number * spacing) < 0.02 * spacing):
