@@ -61,6 +61,7 @@ class Smoothed:
     percent: Floats
     limit: Floats
     signal: Bools
+    z: Floats  # the values charted, in sigmas; NaN where one did not count
 
 
 _GRID = (4.0, 6.0, 8.0, 12.0, 20.0, 40.0, 120.0, float("inf"))
@@ -73,7 +74,8 @@ def smooth(series: Chartable, arl: float) -> Smoothed:
     three runs on its own side: one run alone never makes a drift.
     """
     z, counting = _tamed(series.percent / series.sd)
-    level = ewma_level(np.where(counting, z, np.nan), WEIGHT)
+    charted = np.where(counting, z, np.nan)
+    level = ewma_level(charted, WEIGHT)
     count = np.cumsum(counting, axis=0).astype(np.float64)
     runs = np.maximum(series.runs, 1.0) / _LOSS
     kept = 1.0 - (1.0 - WEIGHT) ** count
@@ -91,7 +93,9 @@ def smooth(series: Chartable, arl: float) -> Smoothed:
     recent[2:] += agreeing[:-2]
     signal = np.isfinite(z) & (np.abs(level) > limit) & (recent >= 2)
     started = count > 0
-    return Smoothed(np.where(started, level * series.sd, np.nan), np.where(started, limit * series.sd, np.nan), signal)
+    return Smoothed(
+        np.where(started, level * series.sd, np.nan), np.where(started, limit * series.sd, np.nan), signal, charted
+    )
 
 
 def _tamed(z: Floats) -> tuple[Floats, Bools]:

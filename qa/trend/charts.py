@@ -132,6 +132,26 @@ def ewma(values: Floats, *, weight: float, centre: float, sigma: float, width: f
     return EwmaChart(level, centre - half, centre + half, np.abs(level - centre) > half)
 
 
+def last_zero(values: Floats, *, slack: float) -> int:
+    """Index of the first value after the CUSUM that now stands higher was last zero: where a shift began.
+
+    Parameters
+    ----------
+    values : (n,) float64 in order of time, target 0, ending at the signal
+    slack : k, in the unit of the values
+
+    References
+    ----------
+    Page (1954), Biometrika 41, 100-115.
+    """
+    chart = cusum(values, target=0.0, slack=slack, decision=float("inf"))
+    higher = chart.high if chart.high[-1] >= chart.low[-1] else chart.low
+    zeros = np.flatnonzero(higher <= 0.0)
+    here = np.flatnonzero(np.isfinite(values))
+    after = here[here > zeros[-1]] if zeros.size else here
+    return int(after[0]) if after.size else len(values) - 1
+
+
 def cusum(values: Floats, *, target: float, slack: float, decision: float, head_start: float = 0.0) -> CusumChart:
     """Two-sided tabular CUSUM.
 

@@ -9,6 +9,7 @@ import numpy as np
 
 from qa.trend.baseline import Segment
 from qa.trend.budget import Shares, Smoothed, beyond_chance
+from qa.trend.charts import last_zero
 from qa.trend.judgements import StreamColumns, graded
 from qa.trend.levels import Lane
 from qa.trend.sentences import counted, percent, plain, vials
@@ -16,6 +17,7 @@ from qa.trend.standing import Tolerance, standing
 from qa.trend.streams import Block, Bools, Ints
 from qa.words import Floats, Verdict
 
+SLACK = 0.5  # sigmas: half the shift that is worth dating
 Said = list[tuple[Verdict, str]]
 
 
@@ -50,14 +52,14 @@ class Weighing:
         self.baseline, self.reference = against_baseline.rows(rows), against_reference.rows(rows)
         self.percent = np.where(segment.known, segment.percent, np.nan)
         self.deviation, self.u_deviation = block.deviation[rows], block.u_deviation[rows]
-        self.sd, self.smoothed, self.limit = (np.full(shape, np.nan) for _ in range(3))
+        self.sd, self.smoothed, self.limit, self.z = (np.full(shape, np.nan) for _ in range(4))
         self.chart_signal = np.zeros(shape, dtype=bool)
         guard = np.full(shape, np.inf)
         for one in charts:
             columns = one.lane.columns
             self.sd[:, columns] = one.lane.sd_total
             self.smoothed[:, columns], self.limit[:, columns] = one.vials.percent, one.vials.limit
-            self.chart_signal[:, columns] = one.vials.signal
+            self.chart_signal[:, columns], self.z[:, columns] = one.vials.signal, one.vials.z
             guard[:, columns] = beyond_chance(share.reading, np.asarray(one.lane.vials.freedom))
         stated = np.where(np.isfinite(segment.u), segment.u, 0.0)
         self.from_baseline = standing(self.percent, self.sd, np.fmax(self.sd, stated), guard, self.baseline)
@@ -142,8 +144,9 @@ class Weighing:
         level, u = float(level_of.percent[index]), float(level_of.sd[index])
         if common.signal[index]:
             text = (
-                f"{name} of the whole scanner has moved: its smoothed level is {common.percent[index]:+.2f} % from its "
-                f"baseline, beyond what chance gives ({common.limit[index]:.2f} %)."
+                f"{name} of the whole scanner has moved since about {self._since(common.z[: index + 1])}: its smoothed "
+                f"level is {common.percent[index]:+.2f} % from its baseline, beyond what chance gives "
+                f"({common.limit[index]:.2f} %)."
             )
             return [(Verdict.WATCH, text)]
         if abs(level) > self.run_limit[number][index]:
@@ -175,12 +178,18 @@ class Weighing:
             said.append((graded(grade), text + "."))
         if not said and self.chart_signal[index, column]:
             kind = "moves apart from the other vials" if lane.apart else "has moved"
+            since = self._since(self.z[: index + 1, column])
             text = (
-                f"{name} {kind}: smoothed {self.smoothed[index, column]:+.1f} %, beyond what chance gives "
-                f"({self.limit[index, column]:.1f} %)."
+                f"{name} {kind} since about {since}: smoothed {self.smoothed[index, column]:+.1f} %, "
+                f"beyond what chance gives ({self.limit[index, column]:.1f} %)."
             )
             said.append((Verdict.WATCH, text))
         return said
+
+    def _since(self, z: Floats) -> str:
+        """The day of the run at which a shift that now signals began."""
+        start = last_zero(z, slack=SLACK)
+        return str(self.block.acquired[self.segment.first + start].astype("datetime64[D]"))
 
     def _within_chance(self, index: int) -> Said:
         """Readings beyond a watch limit that an unchanged vial's scatter explains: said, but no reason to watch."""

@@ -82,7 +82,7 @@ def stable(campaigns):
 
 def kind_of(reason):
     """The kind of a reason, by its wording."""
-    for words in ("whole scanner has moved", "further than single runs", "moves apart", "beyond the", "No usable"):
+    for words in ("of the whole scanner has moved", "further than single runs", "moves apart", "beyond the", "No usable"):
         if words in reason:
             return words
     return reason

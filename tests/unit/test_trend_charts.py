@@ -9,7 +9,7 @@ from numpy.testing import assert_allclose
 
 from qa.trend.arl import ewma_limit, ewma_limit_estimated
 from qa.trend.budget import WEIGHT, Promise, beyond_chance, shares, smooth
-from qa.trend.charts import cusum, ewma, ewma_level, individuals
+from qa.trend.charts import cusum, ewma, ewma_level, individuals, last_zero
 from qa.trend.levels import Chartable
 from qa.trend.widths import width_of
 
@@ -110,6 +110,14 @@ def test_a_lasting_shift_of_two_sigmas_is_soon_seen():
         delays.append(int(after[0]) + 1 if after.size else 99)
     assert np.median(delays) <= 10
     assert max(delays) < 50
+
+
+@given(st.integers(5, 30), st.integers(3, 20), st.sampled_from([-1.0, 1.0]))
+def test_a_shift_is_dated_to_its_first_value(before, after, side):
+    values = np.concatenate([np.zeros(before), np.full(after, 2.0 * side)])
+    assert last_zero(values, slack=0.5) == before
+    values[0] = np.nan
+    assert last_zero(values, slack=0.5) == before
 
 
 def chartable(percent):
