@@ -56,7 +56,10 @@ def shares(promise: Promise, runs_per_year: float, levels: int, vials: int) -> S
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Smoothed:
-    """EWMA of a series in percent, its limit in percent (symmetric about 0), and where it signals."""
+    """EWMA of a series in percent, its limit in percent (symmetric about 0), and where it signals.
+
+    `percent` smooths the values as they are, to be shown; signals come from values cut at three sigmas.
+    """
 
     percent: Floats
     limit: Floats
@@ -93,8 +96,10 @@ def smooth(series: Chartable, arl: float) -> Smoothed:
     recent[2:] += agreeing[:-2]
     signal = np.isfinite(z) & (np.abs(level) > limit) & (recent >= 2)
     started = count > 0
+    plain = ewma_level(np.where(counting, series.percent, np.nan), WEIGHT)
+    shown = np.where(np.abs(plain) > np.abs(level) * series.usual_sd, plain, level * series.usual_sd)
     return Smoothed(
-        np.where(started, level * series.sd, np.nan), np.where(started, limit * series.sd, np.nan), signal, charted
+        np.where(started, shown, np.nan), np.where(started, limit * series.usual_sd, np.nan), signal, charted
     )
 
 

@@ -126,16 +126,13 @@ class _Finder:
             findings += restart_findings(block, self.stretches[block.scanner, block.phantom], self.log)
         for course in self.courses:
             if course.current:
-                covered = {
-                    v
-                    for f in findings
-                    if f.state == "open"
-                    and course.scanner in f.scanners
-                    and course.phantom in f.phantoms
-                    and f.scan == course.scan
-                    for v in f.vials
-                }
-                findings += limit_findings(course, self.limits, self.today, covered)
+                explained: dict[str, float] = {}
+                for one in findings:
+                    here = course.scanner in one.scanners and course.phantom in one.phantoms
+                    if one.state == "open" and here and one.scan == course.scan:
+                        for label in one.vials:
+                            explained[label] = explained.get(label, 0.0) + one.size_percent
+                findings += limit_findings(course, self.limits, self.today, explained)
                 findings += run_findings(course, self.log)
                 findings += spread_findings(course, self.log)
         order = {Verdict.ACT: 0, Verdict.WATCH: 1, Verdict.VOID: 2, Verdict.STEADY: 3}

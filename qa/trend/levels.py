@@ -26,6 +26,7 @@ class Chartable:
 
     percent: Floats  # deviation from the baseline
     sd: Floats  # of one value of an unchanged series, known before the run
+    usual_sd: Floats  # the same if the run were no more uncertain than those of the baseline
     freedom: Floats  # degrees of freedom behind sd
     runs: Floats  # runs behind the baseline
 
@@ -136,7 +137,7 @@ def _lane(segment: Segment, scan: str, quantity: str, columns: Ints) -> Lane:
     variance = ((_PRIOR_FREEDOM + own_freedom) * base + later) / freedom
     stretch = np.clip(np.nan_to_num(u / typical, nan=1.0), 1.0, None) ** 2
     sd = np.sqrt(variance * stretch)
-    vials = Chartable(np.where(known, residual, np.nan), sd, freedom, segment.count[columns])
+    vials = Chartable(np.where(known, residual, np.nan), sd, np.sqrt(variance), freedom, segment.count[columns])
 
     if columns.size < 2:
         return Lane(scan, quantity, columns, None, vials, apart, sd * np.sqrt(1.0 + LOSS / np.maximum(vials.runs, 1.0)))
@@ -160,7 +161,11 @@ def _level_chart(level: Floats, known: Bools, variance: Floats, excess: Floats) 
     judged = ~window & (np.arange(len(level)) >= start)
     later, later_freedom = _later_variance(level[:, None], judged[:, None], np.maximum(known_base, floor)[:, None])
     total = (freedom * known_base + later[:, 0]) / np.maximum(freedom + later_freedom[:, 0], 1.0)
-    sd = np.sqrt(np.maximum(total, floor) + excess)
+    usual = np.maximum(total, floor)
     return Chartable(
-        np.where(judged, level, np.nan), sd, np.maximum(freedom + later_freedom[:, 0], 1.0), np.array(count)
+        np.where(judged, level, np.nan),
+        np.sqrt(usual + excess),
+        np.sqrt(usual),
+        np.maximum(freedom + later_freedom[:, 0], 1.0),
+        np.array(count),
     )

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from datetime import date
 from itertools import pairwise
 from typing import TYPE_CHECKING
@@ -68,8 +69,14 @@ def _plain_finding(
     )
 
 
-def limit_findings(course: Course, limits: tuple[LimitBlock, ...], today: date, covered: set[str]) -> list[Finding]:
-    """Vials whose last three usable readings lie beyond a limit from the reference (or, uncovered, the baseline)."""
+def limit_findings(
+    course: Course, limits: tuple[LimitBlock, ...], today: date, explained: Mapping[str, float]
+) -> list[Finding]:
+    """Vials whose last three usable readings lie beyond a limit, less what open findings explain.
+
+    `explained` holds, for vials with open findings, how much those have moved it, percent: such a vial is not named
+    again for its baseline, and for its reference only if it were beyond the limit without them.
+    """
     rows = slice(course.segment.first, course.segment.last)
     found: dict[str, list[tuple[str, float, Verdict, float]]] = {"reference": [], "baseline": []}
     for column, label in enumerate(course.labels):
@@ -81,13 +88,14 @@ def limit_findings(course: Course, limits: tuple[LimitBlock, ...], today: date, 
         ):
             block = held.get(against)  # type: ignore[call-overload]
             values = series[np.isfinite(series)]
-            if block is None or values.size < 3 or (against == "baseline" and label in covered):
+            if block is None or values.size < 3 or (against == "baseline" and label in explained):
                 continue
-            least = float(np.abs(values[-3:]).min()) if abs(np.sign(values[-3:]).sum()) == 3 else 0.0
+            values = values[-3:] - explained.get(label, 0.0)
+            least = float(np.abs(values).min()) if abs(np.sign(values).sum()) == 3 else 0.0
             if least > block.watch_percent:
                 verdict = Verdict.ACT if least > block.act_percent else Verdict.WATCH
                 limit = block.act_percent if least > block.act_percent else block.watch_percent
-                found[against].append((label, float(np.median(values[-3:])), verdict, limit))
+                found[against].append((label, float(np.median(series[np.isfinite(series)][-3:])), verdict, limit))
     findings = []
     last = float(course.days[-1])
     for against, hits in found.items():

@@ -122,4 +122,5 @@ def test_a_shift_is_dated_to_its_first_value(before, after, side):
 
 def chartable(percent):
     shape = percent.shape
-    return Chartable(percent, np.full(shape, 0.5), np.full(shape, 30.0), np.array(8.0))
+    sd = np.full(shape, 0.5)
+    return Chartable(percent, sd, sd, np.full(shape, 30.0), np.array(8.0))
