@@ -57,7 +57,7 @@ def test_a_slice_like_no_pulse_and_a_field_that_varies():
     values, _ = expected_magnitude(clean, 0.001)
     found = TRAIN.fit(signals_of(values, TRAIN_TE_MS, 0.001, 20, **KNOWN))
     assert_allclose(found.value_ms, T2_MS, rtol=0.003)
-    assert found.reduced_chi2.max() < 1.0
+    assert found.reduced_chi2.max() < 3.0  # in units of 2e-4 of the signal
 
 
 @pytest.mark.parametrize("level", [0.88, 0.95, 1.06])
