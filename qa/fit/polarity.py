@@ -15,7 +15,9 @@ from qa.fit.varpro import CHUNK_ROWS
 from qa.words import Floats, Ints
 
 GRID = 48
-STEPS = 7
+STEPS = 4
+HOPE = 3.0  # a case is given up on the grid if even so many times the grid's coarseness would not save it
+SETTLED = 1e-6  # a last step of this size leaves an error of its square
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -36,6 +38,29 @@ def rate_range(times: Floats) -> tuple[float, float]:
 
 def fit_decays(values: Floats, times: Floats) -> Decays:
     """Least squares of a + b exp(-t R) for signed `values` (n, m): grid, then safeguarded Newton to convergence."""
+    grid = _grid(times)
+    mean = values.mean(axis=1)
+    y = values - mean[:, None]
+    best = np.argmax(np.square(y @ grid.shapes.T), axis=1)
+    return _refined(y, mean, grid, best)
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class _Grid:
+    """Rates searched first, in units of the longest time; `shapes` (g, m) are centred and of unit length."""
+
+    unit: float
+    times: Floats  # (m,)
+    rates: Floats  # (g,)
+    shapes: Floats  # (g, m)
+
+    def coarseness(self) -> float:
+        """Share of a decay's power that the nearest grid rate may miss."""
+        neighbours = np.einsum("gm,gm->g", self.shapes[1:], self.shapes[:-1])
+        return float(1.0 - np.min(neighbours) ** 2) / 4.0  # half way between, the angle is half as large
+
+
+def _grid(times: Floats) -> _Grid:
     unit = float(np.max(times))
     t = np.asarray(times, float) / unit
     low, high = rate_range(t)
@@ -43,9 +68,12 @@ def fit_decays(values: Floats, times: Floats) -> Decays:
     shapes = np.exp(-t[None, :] * rates[:, None])
     shapes -= shapes.mean(axis=1, keepdims=True)
     shapes /= np.linalg.norm(shapes, axis=1, keepdims=True)
-    mean = values.mean(axis=1)
-    y = values - mean[:, None]
-    best = np.argmax(np.square(y @ shapes.T), axis=1)
+    return _Grid(unit, t, rates, shapes)
+
+
+def _refined(y: Floats, mean: Floats, grid: _Grid, best: Ints) -> Decays:
+    """From the best grid rates to convergence; `y` (n, m) is centred, and is used up."""
+    t, rates = grid.times, grid.rates
     left, right = rates[np.maximum(best - 1, 0)], rates[np.minimum(best + 1, GRID - 1)]
     rate = _newton(y, t, rates[best], left, right)
     e = np.exp(-t * rate[:, None])
@@ -55,7 +83,7 @@ def fit_decays(values: Floats, times: Floats) -> Decays:
     amplitude = np.einsum("rm,rm->r", e, y) / np.where(power > 0, power, 1.0)
     e *= amplitude[:, None]
     y -= e
-    return Decays(rate / unit, mean - amplitude * e_mean, amplitude, np.einsum("rm,rm->r", y, y))
+    return Decays(rate / grid.unit, mean - amplitude * e_mean, amplitude, np.einsum("rm,rm->r", y, y))
 
 
 def _newton(y: Floats, t: Floats, rate: Floats, left: Floats, right: Floats) -> Floats:
@@ -78,7 +106,7 @@ def _newton(y: Floats, t: Floats, rate: Floats, left: Floats, right: Floats) -> 
         change = np.where(curve_log < 0, -slope_log / np.where(curve_log < 0, curve_log, -1.0), np.inf)
         new = rate * np.exp(np.clip(change, -3.0, 3.0))
         new = np.where((new > left) & (new < right), new, np.sqrt(left * right))
-        moved = np.abs(new - rate) > 1e-10 * rate
+        moved = np.abs(new - rate) > SETTLED * rate
         rate = new
         if step >= 2 and not moved.any():
             break
@@ -143,7 +171,18 @@ def fit_magnitude_decays(magnitudes: Floats, times: Floats, floor: float = 0.0) 
 
 def _best_of(magnitudes: Floats, times: Floats, floor: float) -> tuple[Floats, Floats, Floats, Floats, Ints]:
     owner, flips = polarities(magnitudes, floor)
-    tried = fit_decays(with_signs(magnitudes[owner], flips), times)
+    grid = _grid(times)
+    signed = with_signs(magnitudes[owner], flips)
+    mean = signed.mean(axis=1)
+    signed -= mean[:, None]
+    explained = np.square(signed @ grid.shapes.T)
+    best = np.argmax(explained, axis=1)
+    power = np.einsum("rm,rm->r", signed, signed)
+    most = power - explained[np.arange(len(best)), best]  # refinement can only lower it, and not by much:
+    least = most - HOPE * grid.coarseness() * power
+    kept = least <= most[lowest(owner, most, len(magnitudes))][owner]
+    owner, flips = owner[kept], flips[kept]
+    tried = _refined(signed[kept], mean[kept], grid, best[kept])
     best = lowest(owner, tried.rss, len(magnitudes))
     sign = np.where(tried.offset[best] < 0, -1.0, 1.0)
     return tried.rate[best], sign * tried.offset[best], sign * tried.amplitude[best], tried.rss[best], flips[best]

@@ -52,7 +52,9 @@ def loop(values: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
             signed[:flips] *= -1.0
             start = (null / 0.69, last, -last - float(magnitude[0]))
             try:
-                popt, _ = curve_fit(curve, TI_MS, signed, p0=start, jac=jacobian, method="lm", maxfev=400)
+                popt, _ = curve_fit(
+                    curve, TI_MS, signed, p0=start, jac=jacobian, method="lm", maxfev=400, check_finite=False
+                )
             except RuntimeError:
                 continue
             residual = signed - curve(TI_MS, *popt)
