@@ -17,13 +17,15 @@ _ONE_SCANNER = "only one scanner was measured"
 
 
 def components(made: Sequence[Slab]) -> Components | None:
-    """Variance components over all levels that at least two scanners share, or over all if there are none."""
+    """Variance components over all levels that tell scanners apart: from a reference, or shared by two scanners."""
     shared: dict[Key, set[str]] = {}
+    referred: set[Key] = set()
     for slab in made:
         for column, key in enumerate(slab.keys):
             if np.isfinite(slab.percent[:, column]).any():
                 shared.setdefault(key, set()).add(slab.scanner)
-    common = {key for key, scanners in shared.items() if len(scanners) > 1} or set(shared)
+                referred |= {key} if slab.from_reference[column] else set()
+    common = {key for key, scanners in shared.items() if len(scanners) > 1 or key in referred} or set(shared)
     names = sorted({slab.scanner for slab in made})
     keys = sorted(common)
     values, scanner, vial, run = [], [], [], []

@@ -207,7 +207,7 @@ class _Finder:
         for course in moved:
             course.aged.setdefault(label, []).append(change)
         cause, reasons = why_vial(change, label, moved, still, len(crossing) - len(moved) - len(still), several)
-        now = float(np.nanmean([_last(_own(c, label)) for c in moved if c.current] or [change.size]))
+        now = _stands([(c.days, _own(c, label)) for c in moved if c.current], change)
         return [self._finding(change, moved, (label,), cause, reasons, now, f"vial {label}")]
 
     # Common levels
@@ -240,7 +240,7 @@ class _Finder:
                     and change.earliest <= c.latest + 28
                     and np.sign(c.size) == np.sign(change.size)
                 }
-            now = float(np.nanmean([_last(c.level) for c in together]))
+            now = _stands([(c.days, c.level) for c in together], change)
             subject = f"all vials of {course.phantom}" if cause == "phantom" else "all vials"
             findings.append(self._finding(change, together, course.labels, cause, reasons, now, subject))
         return findings
@@ -265,17 +265,17 @@ class _Finder:
         labels: tuple[str, ...],
         cause: Cause,
         reasons: tuple[str, ...],
-        now: float,
+        stands: tuple[float, float],
         subject: str,
     ) -> Finding:
-        course = where[0]
+        course, (now, u_now) = where[0], stands
         scanners = tuple(sorted({c.scanner for c in where}))
         phantoms = tuple(sorted({c.phantom for c in where}))
         watch, act = self._limits(course, labels)
         state = self._state(change, where, now)
         coming = None
         if change.kind == "slope" and state == "open":
-            coming = forecast(change, now, act if np.isfinite(act) else watch, self.today)
+            coming = forecast(change, now, u_now, act if np.isfinite(act) else watch, self.today)
         verdict = Verdict.STEADY
         if state == "open":
             certain = coming is not None and coming.latest is not None and coming.latest <= self._next_run(where)
@@ -351,10 +351,23 @@ def _own(course: Course, label: str) -> Floats:
     return course.own[:, course.labels.index(label)]
 
 
-def _last(series: Floats) -> float:
-    """Where a series stands now: the median of its last five values."""
-    here = series[np.isfinite(series)][-5:]
-    return float(np.median(here)) if here.size else float("nan")
+def _stands(series: Sequence[tuple[Floats, Floats]], change: Change) -> tuple[float, float]:
+    """Where series (days, values) stand at their last run, and the standard uncertainty.
+
+    From the median of the last five values, carried along a slope to the last.
+    """
+    last, variance = [], []
+    for days, values in series:
+        there = np.isfinite(values)
+        along = change.at(days[there]) if change.kind == "slope" else np.zeros(int(there.sum()))
+        here = values[there] - along
+        if here.size > 2:
+            scatter = 1.4826 * float(np.median(np.abs(np.diff(here)))) / np.sqrt(2.0)
+            last.append(float(np.median(here[-5:])) + float(along[-1]))
+            variance.append(1.57 * scatter**2 / min(here.size, 5))
+    if not last:
+        return change.size, change.u_size
+    return float(np.mean(last)), float(np.sqrt(np.sum(variance))) / len(last)
 
 
 def _changes(family: Sequence[Course], series: dict[int, Floats], alpha: float) -> tuple[Change, ...]:
