@@ -41,6 +41,10 @@ class ArchiveError(VialbookError):
     """The archive of original files cannot be read or written, or a file in it is not what its name says."""
 
 
+class AlteredError(ArchiveError):
+    """A file in the archive is not what its name says."""
+
+
 class StoreError(VialbookError):
     """The database cannot be opened, read or written."""
 

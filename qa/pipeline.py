@@ -76,6 +76,7 @@ def ingest(
     tell = progress or _silent
     day = today or datetime.now(site.timezone).date()
     with open_book(site) as book:
+        waiting = [run for run, verdict in _verdicts(book) if verdict is None]  # an earlier ingest was cut short
         taken = intake.gather(paths, site, known=book.known_files(), progress=progress)
         held = list(taken.held)
         measured: dict[str, Measurement] = {}
@@ -94,8 +95,6 @@ def ingest(
         tell("measuring runs", len(taken.sessions), len(taken.sessions))
         book.hold(held)
         book.release(used)
-        waiting = book.runs()
-        new = [*waiting.loc[waiting["verdict"].isna(), "run"]]
         judged = judge_book(book, site)
         trend = keep_findings(book, site, day)
         front = None
@@ -103,7 +102,7 @@ def ingest(
             tell("writing pages", 0, 1)
             front = write_report(site, book=book, runs=list(judged), today=day)
             tell("writing pages", 1, 1)
-        outcomes = _outcomes(book, new, measured, front)
+        outcomes = _outcomes(book, {*waiting, *measured}, measured, front)
         scanners = scanners_today(book, site, day, trend)
     refused = {one.sha256 for one in held}
     rest = sum(file.sha256 not in refused for one in taken.sessions for file in one.files)
@@ -228,6 +227,11 @@ def _without(session: Session, held: Iterable[Held]) -> Session:
     """The session less the files that turned out to be unusable when their pixels were read."""
     refused = {one.sha256 for one in held}
     return replace(session, files=tuple(record for record in session.files if record.sha256 not in refused))
+
+
+def _verdicts(book: Book) -> list[tuple[str, str | None]]:
+    runs = book.runs()
+    return [(str(run), verdict or None) for run, verdict in zip(runs["run"], runs["verdict"].fillna(""), strict=True)]
 
 
 def _outcomes(

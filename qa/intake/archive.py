@@ -9,7 +9,7 @@ from collections import deque
 from concurrent.futures import Future, ThreadPoolExecutor
 from pathlib import Path
 
-from qa.errors import ArchiveError
+from qa.errors import AlteredError, ArchiveError
 
 _WRITERS = 4
 _MOST_WAITING = 64  # files in memory that are still to be written
@@ -95,7 +95,7 @@ class Archive:
         except OSError as error:
             raise ArchiveError(f"cannot be read: {error.strerror}", str(path), remedy) from error
         if content_hash(content) != sha256:
-            raise ArchiveError("the original was altered: its content is not what its name says", str(path), remedy)
+            raise AlteredError("the original was altered: its content is not what its name says", str(path), remedy)
         return content
 
 

@@ -16,7 +16,7 @@ from typing import TYPE_CHECKING, Any, Protocol
 
 from sqlalchemy import Connection, Select, select
 
-from qa.errors import ArchiveError
+from qa.errors import AlteredError, ArchiveError
 from qa.store.covers import COVERS, Cover, digest_of
 from qa.store.desk import Desk
 from qa.store.ledger import START, Anchor, Head, entry_hash
@@ -86,7 +86,7 @@ class Audit(Desk):
             for number, cover in enumerate(COVERS.values()):
                 tell("tables", number, len(COVERS))
                 problems += _compare(connection, cover, promised.get(cover.name, {}))
-            files = dict(connection.execute(select(FileRow.sha256, FileRow.path).distinct()).tuples().all())
+            files = {row[0]: row[1] for row in connection.execute(select(FileRow.sha256, FileRow.path).distinct())}
         tell("tables", len(COVERS), len(COVERS))
         if archive is not None:
             for number, (sha256, path) in enumerate(sorted(files.items())):
@@ -185,6 +185,9 @@ def _as_it_was(connection: Connection, cover: Cover, key: str, seq: int, texts: 
 def _check_file(archive: Originals, sha256: str, path: str) -> Iterator[Problem]:
     try:
         content = archive.read(sha256)
+    except AlteredError:
+        yield Problem("original-altered", f"the original of {path} is not what was taken in", sha256)
+        return
     except (ArchiveError, OSError) as error:
         yield Problem("original-missing", f"the original of {path} cannot be read: {error}", sha256)
         return

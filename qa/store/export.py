@@ -8,7 +8,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING, Any, Literal
 
 from qa.errors import StoreError
-from qa.store.columns import canonical
+from qa.store.columns import canonical, plain
 from qa.store.desk import Desk
 
 if TYPE_CHECKING:
@@ -106,8 +106,8 @@ def _write_csv(frame: DataFrame, path: Path) -> None:
 
 
 def _write_json(frame: DataFrame, path: Path) -> None:
-    rows = [{key: _absent(value) for key, value in row.items()} for row in frame.to_dict("records")]
-    path.write_text(json.dumps(json.loads(canonical(rows)), ensure_ascii=False, indent=1) + "\n", encoding="utf-8")
+    rows = [{key: plain(_absent(value)) for key, value in row.items()} for row in frame.to_dict("records")]
+    path.write_text(json.dumps(rows, ensure_ascii=False, indent=1) + "\n", encoding="utf-8", errors="replace")
 
 
 def _absent(value: Any) -> Any:

@@ -93,7 +93,7 @@ class Recording(Desk):
         with self._write() as connection:
             newest = _newest(connection, session.run)
             roles = select(FileRow.sha256, FileRow.role).where(FileRow.run == session.run)
-            known: dict[str, str] = dict(connection.execute(roles).tuples().all())
+            known: dict[str, str] = {row[0]: row[1] for row in connection.execute(roles)}
             if newest and only_new_files and all(file.sha256 in known for file in session.files):
                 return newest
             generation = newest + 1

@@ -27,10 +27,15 @@ def frame(
     titles = list(names) or [str(column.key) for column in columns]
     return pd.DataFrame(
         {
-            title: series(column.type, data[index])
+            title: _kept(series(column.type, data[index]))
             for index, (title, column) in enumerate(zip(titles, columns, strict=True))
         }
     )
+
+
+def _kept(values: Any) -> Any:
+    """Objects stay objects: pandas would turn texts into its own kind of text, and None into NaN."""
+    return pd.Series(values, dtype=object) if getattr(values, "dtype", None) == object else values
 
 
 def series(kind: object, values: Sequence[Any]) -> Any:

@@ -43,7 +43,7 @@ def test_one_run_as_json(fresh_site):
     assert run["scanner"] == "Quay east"
     assert run["phantom"] == "Tideline A"
     assert run["temperature_c"] == 20.4
-    assert run["acquired"].startswith("2026-09-29T07:10:00")
+    assert run["acquired"].startswith("2026-09-29T05:47:00")
     assert len(run["readings"]) == 24
     for reading in run["readings"]:
         if reading["state"] in ("good", "marked"):
