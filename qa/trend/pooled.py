@@ -46,6 +46,10 @@ class Course:
     def phantom(self) -> str:
         return self.block.phantom
 
+    def own_of(self, label: str) -> Floats:
+        """(r,) what one vial adds to the level."""
+        return self.own[:, self.labels.index(label)]
+
     def relevel(self) -> None:
         """Works the level out again without the vials that were found to move by themselves."""
         percent = self.percent.copy()

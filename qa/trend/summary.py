@@ -143,7 +143,9 @@ LEVEL_COLUMNS = (
 )
 
 
-def levels_frame(made: Sequence[Block], stretches: Stretches, parts: Parts, schedule_days: float = 7.0) -> pd.DataFrame:
+def levels_frame(
+    made: Sequence[Block], stretches: Stretches, parts: Parts, schedule_days: float, promise: Promise
+) -> pd.DataFrame:
     """The scanner-wide level of each scan at each run, with its smoothed value and chart limit (causal); percent."""
     import pandas as pd
 
@@ -151,7 +153,7 @@ def levels_frame(made: Sequence[Block], stretches: Stretches, parts: Parts, sche
     for block in made:
         same = [other for other in made if other.scanner == block.scanner]
         share = shares(
-            Promise(), 365.25 / schedule_days, sum(len(o.scans) for o in same), sum(len(o.streams) for o in same)
+            promise, 365.25 / schedule_days, sum(len(o.scans) for o in same), sum(len(o.streams) for o in same)
         )
         pairs = zip(stretches[block.scanner, block.phantom], parts[block.scanner, block.phantom], strict=True)
         for number, (segment, split) in enumerate(pairs):

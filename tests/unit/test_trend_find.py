@@ -158,6 +158,10 @@ def test_a_mended_fault_is_told_as_over():
     every = found(campaign(shift=there_and_back))
     assert [finding.kind for finding in every] == ["step", "step"]
     assert all(finding.state == "returned" and finding.verdict is Verdict.STEADY for finding in every)
+    assert len({finding.finding for finding in every}) == 2
+    before = one(campaign(shift=there_and_back), today=START + timedelta(days=320))
+    assert before.state == "open"
+    assert before.finding == min(every, key=lambda finding: finding.onset).finding
 
 
 def test_a_restart_accepts_the_step_but_reports_it():
