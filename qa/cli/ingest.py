@@ -12,6 +12,8 @@ from qa.cli.terminal import Terminal, attention
 from qa.errors import UsageError
 
 if TYPE_CHECKING:
+    from zoneinfo import ZoneInfo
+
     from qa.pipeline import IngestOutcome, RunOutcome
 
 
@@ -39,7 +41,7 @@ def ingest(
         outcome = take_in(
             place, paths, celsius=celsius, progress=progress, report=not no_report, today=today_of(today, place)
         )
-    _tell(terminal, outcome)
+    _tell(terminal, outcome, place.timezone)
     terminal.result(of_ingest(outcome))
     if needs_attention(outcome):
         raise typer.Exit(1)
@@ -52,9 +54,9 @@ def needs_attention(outcome: IngestOutcome) -> bool:
     return bool(outcome.held) or standing or any(run.verdict != "steady" for run in outcome.runs)
 
 
-def _tell(terminal: Terminal, outcome: IngestOutcome) -> None:
+def _tell(terminal: Terminal, outcome: IngestOutcome, zone: ZoneInfo) -> None:
     titles = ("acquired", "scanner", "phantom", "°C", "T1", "T2", "vials", "verdict")
-    terminal.table(titles, [_row(run) for run in outcome.runs], verdict=7)
+    terminal.table(titles, [_row(run, zone) for run in outcome.runs], verdict=7)
     if outcome.runs:
         terminal.line(
             "T1 and T2: median deviation of the vials from their reference values, at the reference temperature."
@@ -70,7 +72,7 @@ def _tell(terminal: Terminal, outcome: IngestOutcome) -> None:
         more = f" ({len(one.reasons) - 1} more on its page)" if len(one.reasons) > 1 else ""
         terminal.line(attention(verdict, f"{one.scanner}: {first}{more}"))
     for held in outcome.held:
-        terminal.line(attention("void", f"held [{held.code}] {held.path}: {held.reason}").replace("void", "held", 1))
+        terminal.line(attention("held", f"[{held.code}] {held.path}: {held.reason}"))
     for one in outcome.scanners:
         if one.verdict == "steady":
             terminal.line(f"   steady: {one.scanner}: {one.sentence}")
@@ -78,12 +80,12 @@ def _tell(terminal: Terminal, outcome: IngestOutcome) -> None:
         terminal.line(f"\nFront page: {outcome.front_page}")
 
 
-def _row(run: RunOutcome) -> tuple[str, ...]:
+def _row(run: RunOutcome, zone: ZoneInfo) -> tuple[str, ...]:
     readings = run.measurement.readings
     counted = sum(1 for reading in readings if reading.value_ms is not None)
     celsius = run.measurement.celsius
     return (
-        f"{run.acquired:%Y-%m-%d %H:%M}",
+        f"{run.acquired.astimezone(zone):%Y-%m-%d %H:%M}",
         run.scanner,
         run.phantom,
         f"{celsius:.1f}" if celsius is not None else "–",

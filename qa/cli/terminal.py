@@ -12,7 +12,7 @@ if TYPE_CHECKING:
     from qa.words import Verdict
 
 Progress = Callable[[str, int, int], None]
-MARKS = {"steady": "  ", "watch": "! ", "act": "!!", "void": "? "}  # shapes, so that colour is not needed
+MARKS = {"steady": "  ", "watch": "! ", "act": "!!", "void": "? ", "held": "? "}  # shapes, so that colour is not needed
 _STYLES = {"steady": "", "watch": "bold", "act": "bold reverse", "void": "bold"}
 
 

@@ -17,8 +17,8 @@ INCOMING = ROOT / "sample_site" / "incoming"
 def test_the_sample_site_tells_its_story(taken_in):
     site, done = taken_in
     assert "280 files: 278 used, 0 known already, 2 held." in done.out
-    assert "held [truncated]" in done.out
-    assert "held [not-dicom]" in done.out
+    assert "held: [truncated]" in done.out
+    assert "held: [not-dicom]" in done.out
     assert f"Front page: {site / 'pages' / 'index.html'}" in done.out
     drift = answer("drift", "--today", TODAY, site=site, codes=(0, 1))
     moved = [one for one in drift["findings"] if one["state"] in ("open", "ruled") and one["scanner"] == "Lighthouse"]
