@@ -9,7 +9,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass, replace
-from math import hypot, isfinite, sqrt
+from math import hypot, isfinite
 
 import numpy as np
 
@@ -25,6 +25,7 @@ from qa.site.plate import Plate, Reference
 from qa.temperature import RunTemperature, correct
 from qa.words import Consequence, Floats, Ints, Quantity, Remark, State
 
+PRIOR_FREEDOM = 2.0  # what the other vials' differences weigh against a vial's own
 PATCH_VOXELS = 9.0  # voxels over which differences inside a vial are taken to hang together (a 3 x 3 patch)
 FEW_VOXELS = 5  # fewer voxels than this are used, but marked
 
@@ -190,34 +191,44 @@ def _fit(one: _Scanned, plate: Plate, t1_known: dict[str, tuple[float, float]]) 
         y_mm=_at(signals.y_mm, owner),
     )
     per_voxel = method.map(singles, estimate, owner)
-    u_region = np.array(
-        [
-            region_uncertainty(per_voxel[owner == row], estimate.u_ms[row], signals.voxels[row])
-            for row in range(len(voxels))
-        ]
-    )
+    blocks = [per_voxel[owner == row] for row in range(len(voxels))]
+    u_region = region_uncertainty(blocks, estimate.value_ms, estimate.u_ms, signals.voxels)
     return _Fitted(one, signals, estimate, u_region)
 
 
-def region_uncertainty(values_ms: Floats, u_noise_ms: float, voxels: float) -> float:
-    """What differences between a vial's voxels add to the standard uncertainty of its mean, ms.
+def region_uncertainty(per_voxel_ms: Sequence[Floats], value_ms: Floats, u_noise_ms: Floats, voxels: Floats) -> Floats:
+    """What differences between a vial's voxels add to the standard uncertainty of its mean, (vials,), ms.
 
     The robust spread of the voxel values (1.4826 times the median absolute deviation), less what thermal noise alone
-    gives one voxel, divided by the number of 3 x 3 patches: neighbours share ringing, shading and flow, so
-    they are not counted as independent.
+    gives one voxel, divided by the number of 3 x 3 patches: neighbours share ringing, shading and flow, so they are not
+    counted as independent. A handful of voxels says little of a variance, so each vial's (relative to its value) is
+    drawn towards the mean of all vials of the scan by their degrees of freedom.
 
     Parameters
     ----------
-    values_ms : (voxels,) fitted voxel by voxel, NaN where that failed
-    u_noise_ms : standard uncertainty from noise of the vial's average
-    voxels : how many voxels were averaged
+    per_voxel_ms : per vial, fitted voxel by voxel, NaN where that failed
+    value_ms, u_noise_ms : (vials,), the vial averages and their standard uncertainty from noise
+    voxels : (vials,), how many independent voxels were averaged
+
+    References
+    ----------
+    Smyth (2004), Stat Appl Genet Mol Biol 3(1), article 3 (moderated variances). The degrees of freedom of a median
+    absolute deviation are those of a standard deviation times its efficiency, 0.37 (Rousseeuw and Croux 1993, JASA 88,
+    1273-1283).
     """
-    good = values_ms[np.isfinite(values_ms)]
-    if len(good) < 4 or not isfinite(u_noise_ms):
-        return 0.0
-    spread = 1.4826 * float(np.median(np.abs(good - np.median(good))))
-    beyond = spread**2 - u_noise_ms**2 * voxels
-    return sqrt(max(beyond, 0.0) / max(1.0, voxels / PATCH_VOXELS))
+    excess, freedom = np.zeros(len(per_voxel_ms)), np.zeros(len(per_voxel_ms))
+    for row, values in enumerate(per_voxel_ms):
+        good = values[np.isfinite(values)]
+        if len(good) >= 4 and np.isfinite(u_noise_ms[row]) and value_ms[row] > 0:
+            spread = 1.4826 * float(np.median(np.abs(good - np.median(good))))
+            excess[row] = (spread**2 - u_noise_ms[row] ** 2 * voxels[row]) / value_ms[row] ** 2
+            freedom[row] = 0.37 * (len(good) - 1)
+    if not freedom.any():
+        return np.zeros(len(per_voxel_ms))
+    common = max(float(np.average(excess, weights=freedom)), 0.0)
+    drawn = np.maximum((freedom * excess + PRIOR_FREEDOM * common) / (freedom + PRIOR_FREEDOM), 0.0)
+    patches = np.maximum(1.0, voxels / PATCH_VOXELS)
+    return np.where(freedom > 0, np.nan_to_num(value_ms) * np.sqrt(drawn / patches), 0.0)
 
 
 def _readings(
