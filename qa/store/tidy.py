@@ -35,7 +35,7 @@ def frame(
 
 def _kept(values: Any) -> Any:
     """Objects stay objects: pandas would turn texts into its own kind of text, and None into NaN."""
-    return pd.Series(values, dtype=object) if getattr(values, "dtype", None) == object else values
+    return pd.Series(values, dtype=object) if str(getattr(values, "dtype", "")) == "object" else values
 
 
 def series(kind: object, values: Sequence[Any]) -> Any:
