@@ -76,10 +76,11 @@ def migrate(site_or_url: Any, *, now: datetime | None = None) -> Migration:
             if not is_older(before):
                 check_revision(before, where)
             copy = copy_aside(file, before, moment) if file is not None else None
+            told = {"before": before, "after": HEAD, "copy": copy.name if copy is not None else None}
             with engine.execution_options(writes=True).begin() as connection:
                 upgrade(connection)
                 _check_references(connection, where)
-                append(connection, moment, "migrated", "book", {"before": before, "after": HEAD, "copy": copy})
+                append(connection, moment, "migrated", "book", told)
     finally:
         engine.dispose()
     if copy is None:

@@ -1,0 +1,142 @@
+"""Opening what is there: an older book, a newer one, somebody else's database; and bringing an older one up to date."""
+
+import sqlite3
+from contextlib import closing
+
+import pytest
+from alembic.autogenerate import compare_metadata
+from alembic.migration import MigrationContext
+from book_factory import fill
+from sqlalchemy import create_engine
+
+from qa.errors import NoBookError, OldBookError, StoreError
+from qa.store import migrate, open_book
+from qa.store import opening as opening_module
+from qa.store import revision as revision_module
+from qa.store.models import Base
+from qa.store.revision import HEAD, VERSION_TABLE
+
+
+def set_revision(path, name):
+    with closing(sqlite3.connect(path)) as connection:
+        connection.execute(f"UPDATE {VERSION_TABLE} SET version_num = ?", (name,))
+        connection.commit()
+
+
+def test_migrating_an_empty_database_gives_the_tables_of_the_models(tmp_path):
+    open_book(tmp_path / "book.sqlite").close()
+    engine = create_engine(f"sqlite:///{tmp_path / 'book.sqlite'}")
+    with engine.connect() as connection:
+        context = MigrationContext.configure(connection, opts={"compare_type": True, "version_table": VERSION_TABLE})
+        assert compare_metadata(context, Base.metadata) == []
+    engine.dispose()
+
+
+def test_no_book_is_not_made_by_looking(tmp_path):
+    with pytest.raises(NoBookError, match="ingest"):
+        open_book(tmp_path / "book.sqlite", create=False)
+    assert list(tmp_path.iterdir()) == []
+
+
+def test_an_older_book_is_refused_and_the_way_is_told(tmp_path):
+    path = tmp_path / "book.sqlite"
+    open_book(path).close()
+    set_revision(path, "0000_before")
+    with pytest.raises(OldBookError, match="vialbook migrate") as caught:
+        open_book(path)
+    assert caught.value.exit_code == 2
+
+
+def test_a_newer_book_is_left_alone(tmp_path):
+    path = tmp_path / "book.sqlite"
+    open_book(path).close()
+    set_revision(path, "9000_later")
+    for act in (open_book, migrate):
+        with pytest.raises(OldBookError, match="newer version"):
+            act(path)
+
+
+def test_migrating_what_is_up_to_date_does_nothing(tmp_path):
+    path = tmp_path / "book.sqlite"
+    open_book(path).close()
+    done = migrate(path)
+    assert (done.before, done.after, done.copy) == (HEAD, HEAD, None)
+    assert [found.name for found in tmp_path.iterdir() if found.suffix == ".sqlite"] == ["book.sqlite"]
+
+
+def test_migrating_copies_the_book_first_and_keeps_every_row(tmp_path, monkeypatch):
+    """A next version's migration stands in: it adds a table."""
+    scripts = tmp_path / "migrations"
+    shipped = opening_module.__file__  # the real scripts lie beside the package
+    assert shipped
+    from qa.places import shipped as folder
+    from qa.store import migrating
+
+    original = folder("migrations")
+    (scripts / "versions").mkdir(parents=True)
+    for name in ("env.py", "script.py.mako"):
+        (scripts / name).write_bytes((original / name).read_bytes())
+    for path in (original / "versions").glob("*.py"):
+        (scripts / "versions" / path.name).write_bytes(path.read_bytes())
+    (scripts / "versions" / "0002_more.py").write_text(
+        'import sqlalchemy as sa\nfrom alembic import op\nrevision = "0002_more"\n'
+        f'down_revision = "{HEAD}"\nbranch_labels = depends_on = None\n'
+        'def upgrade():\n    op.create_table("more", sa.Column("id", sa.Integer(), primary_key=True))\n'
+    )
+    path = tmp_path / "book.sqlite"
+    with open_book(path) as book:
+        fill(book, weeks=2)
+        before = book.readings()
+    for module in (revision_module, migrating, opening_module):
+        monkeypatch.setattr(module, "HEAD", "0002_more")
+    monkeypatch.setattr(migrating, "shipped", lambda name: scripts)
+    with pytest.raises(OldBookError, match="older version"):
+        open_book(path)
+    done = migrate(path)
+    assert (done.before, done.after) == (HEAD, "0002_more")
+    assert done.copy is not None
+    assert str(done.copy) in done.advice
+    with open_book(path) as book:
+        assert book.readings().equals(before)
+        assert book.audit() == []
+        assert "migrated" in list(book.ledger()["kind"])
+    with closing(sqlite3.connect(done.copy)) as copy:
+        assert copy.execute("SELECT count(*) FROM reading").fetchone()[0] == len(before)
+        assert copy.execute(f"SELECT version_num FROM {VERSION_TABLE}").fetchone()[0] == HEAD
+
+
+def test_somebody_elses_database_is_not_touched(tmp_path):
+    path = tmp_path / "book.sqlite"
+    with closing(sqlite3.connect(path)) as connection:
+        connection.execute("CREATE TABLE recipes (dish TEXT)")
+        connection.commit()
+    content = path.read_bytes()
+    with pytest.raises(StoreError, match="another program"):
+        open_book(path)
+    assert path.read_bytes() == content
+
+
+@pytest.mark.parametrize("make", [lambda p: p.mkdir(), lambda p: p.write_bytes(b"not a database" * 200)])
+def test_what_is_no_database_gives_a_clear_error(tmp_path, make):
+    make(tmp_path / "book.sqlite")
+    with pytest.raises(StoreError) as caught:
+        open_book(tmp_path / "book.sqlite")
+    assert "book.sqlite" in str(caught.value)
+
+
+def test_a_database_that_somebody_locks_for_long_says_so(tmp_path, monkeypatch):
+    monkeypatch.setattr("qa.store.engine.BUSY_SECONDS", 0.1)
+    path = tmp_path / "book.sqlite"
+    with open_book(path) as book, closing(sqlite3.connect(path, isolation_level=None)) as other:
+        other.execute("BEGIN IMMEDIATE")
+        with pytest.raises(StoreError):
+            fill(book, weeks=1)
+        other.execute("ROLLBACK")
+        fill(book, weeks=1)
+        assert book.audit() == []
+
+
+def test_an_unknown_kind_of_database_is_named():
+    for url in ("mysql://a@b/c", "nonsense"):
+        with pytest.raises(StoreError, match=r"sqlite:///"):
+            open_book(url)

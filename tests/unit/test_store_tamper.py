@@ -1,0 +1,120 @@
+"""Whatever is changed behind the ledger's back, the audit names it."""
+
+import sqlite3
+from contextlib import closing
+from datetime import date
+
+import pytest
+from book_factory import START, fill
+
+from qa.intake.series import Held
+from qa.site.limits import LimitBlock
+from qa.store import Anchor, open_book
+from qa.store.ledger import START as CHAIN_START
+from qa.store.ledger import entry_hash
+
+FINDING = {"finding": "F-1", "verdict": "watch", "sentence": "T1 moved.", "cause": "scanner"}
+
+
+@pytest.fixture
+def path(tmp_path):
+    """A book in which every table has rows."""
+    target = tmp_path / "book.sqlite"
+    with open_book(target) as book:
+        book.note_limits([LimitBlock(since=date(2025, 1, 1), watch_percent=3, act_percent=5)])
+        fill(book, weeks=2)
+        book.add_log_entry(START, None, None, "note", "something happened")
+        book.hold([Held("in/a.dcm", "truncated", "cut short", "f" * 64)])
+        book.save_findings([FINDING])
+        book.rule("F-1", "A. Person", "dismiss", "coil was loose")
+        assert book.audit() == []
+    return target
+
+
+def change(path, statement):
+    with closing(sqlite3.connect(path)) as connection:
+        assert connection.execute(statement).rowcount > 0
+        connection.commit()
+
+
+def codes(path, anchor=None):
+    with open_book(path) as book:
+        return {problem.code for problem in book.audit(anchor=anchor) if problem.grave}
+
+
+TABLES = (
+    *("reading", "measurement", "run", "evidence", "file", "held", "limits", "limits_set"),
+    *("log_entry", "finding", "ruling"),
+)
+
+
+@pytest.mark.parametrize("table", TABLES)
+def test_a_row_that_is_gone_is_missed(path, table):
+    change(path, f"DELETE FROM {table} WHERE rowid = (SELECT max(rowid) FROM {table})")
+    assert codes(path) & {"row-missing", "row-altered"}
+
+
+@pytest.mark.parametrize(
+    ("table", "setting"),
+    [
+        ("reading", "value_ms = value_ms + 1e-9"),
+        ("reading", "state = 'good', notes = '[\"fine\"]'"),
+        ("measurement", "verdict = 'steady', reasons = '[\"all is well\"]'"),
+        ("measurement", "acquired = '2020-01-01 00:00:00.000000'"),
+        ("run", "scanner = 'Another'"),
+        ("file", "path = 'elsewhere'"),
+        ("held", "reason = 'none'"),
+        ("limits", "block = '{}'"),
+        ("log_entry", "text = 'nothing happened'"),
+        ("finding", "state = 'faded'"),
+        ("ruling", "who = 'B. Person'"),
+    ],
+)
+def test_a_changed_value_is_named(path, table, setting):
+    change(path, f"UPDATE {table} SET {setting} WHERE rowid = (SELECT max(rowid) FROM {table})")
+    assert "row-altered" in codes(path) or "row-missing" in codes(path)
+
+
+def test_a_row_that_nobody_wrote_is_named(path):
+    change(
+        path,
+        "INSERT INTO log_entry SELECT entry + 100, at, scanner, phantom, kind, text, celsius, restart_baseline, source, who, entered_at FROM log_entry LIMIT 1",
+    )
+    assert "row-unwitnessed" in codes(path)
+
+
+@pytest.mark.parametrize(
+    "statement",
+    [
+        "UPDATE ledger SET payload = '{}' WHERE seq = 3",
+        "UPDATE ledger SET at = '2020-01-01 00:00:00.000000' WHERE seq = 3",
+        "DELETE FROM ledger WHERE seq = 3",
+        "DELETE FROM ledger WHERE seq = (SELECT max(seq) FROM ledger)",
+        "DELETE FROM ledger",
+    ],
+)
+def test_a_broken_chain_is_named(path, statement):
+    change(path, statement)
+    assert "chain-broken" in codes(path)
+
+
+def test_a_ledger_rewritten_as_a_whole_is_told_by_an_anchor_only(path):
+    with open_book(path) as book:
+        anchor = book.anchor()
+        assert Anchor.read(str(anchor)) == anchor
+        rows = book.ledger()
+    with closing(sqlite3.connect(path)) as connection:
+        connection.execute("UPDATE ledger SET subject = 'nobody' WHERE seq = 2")
+        last = CHAIN_START
+        for seq in rows["seq"]:
+            row = connection.execute(
+                "SELECT kind, subject, payload, covers FROM ledger WHERE seq = ?", (int(seq),)
+            ).fetchone()
+            at = rows.loc[rows["seq"] == seq, "at"].iloc[0].to_pydatetime()
+            made = entry_hash(int(seq), at, *row, last)
+            connection.execute("UPDATE ledger SET previous = ?, hash = ? WHERE seq = ?", (last, made, int(seq)))
+            last = made
+        connection.execute("UPDATE ledger_head SET hash = ?", (last,))
+        connection.commit()
+    assert codes(path) == set()
+    assert codes(path, anchor) == {"anchor-missed"}
