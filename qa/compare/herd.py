@@ -1,4 +1,4 @@
-"""Who left the others, and when: each scanner's level against the median of the other scanners' levels."""
+"""Who left the others, and when: changes of a scanner's level that the median of the others did not make."""
 
 from __future__ import annotations
 
@@ -6,10 +6,12 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
+from scipy.special import stdtrit
 
 from qa.compare.agreement import Departure
 from qa.compare.slabs import Slab
 from qa.compare.tables import day_of
+from qa.trend.baseline import nanmedian
 from qa.trend.change import Change, measure, wild
 from qa.trend.changes import find_changes
 from qa.trend.levels import common_level
@@ -17,8 +19,6 @@ from qa.words import Floats, Ints
 
 LEAST_PERCENT = 0.5  # a smaller change is no departure
 CHANCE = 0.01  # that any scanner of a steady herd is said to have left, over all scans together
-_NEAREST = 5  # runs of another scanner that tell where it stands at a time
-_APART_DAYS = 90.0  # runs farther away in time tell nothing
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -65,9 +65,9 @@ def _series(slab: Slab) -> _Series | None:
     if not columns.any():
         return None
     percent = percent[:, columns]
-    percent = percent - np.nanmedian(percent, axis=0)
+    percent = percent - nanmedian(percent)
     step = np.diff(percent, axis=0) / np.sqrt(2.0)
-    sd = 1.4826 * np.nanmedian(np.abs(step), axis=0)
+    sd = np.nan_to_num(1.4826 * nanmedian(np.abs(step)))
     floor = float(np.nanmedian(sd[sd > 0])) if (sd > 0).any() else 1e-6
     level = common_level(percent, np.where(sd > 0.2 * floor, sd, floor))
     here = np.isfinite(level)
@@ -79,78 +79,78 @@ def _series(slab: Slab) -> _Series | None:
     return _Series(slab.scanner, slab.phantom, slab.days[here], level[here], noise)
 
 
-def _against(one: _Series, others: Sequence[_Series]) -> tuple[Floats, Floats, Floats]:
-    """(days, difference from the median of the others, its relative standard uncertainty) where the others tell."""
-    stands = np.full((len(others), one.days.size), np.nan)
-    spread = np.full((len(others), one.days.size), np.nan)
-    for row, other in enumerate(others):
-        around = np.searchsorted(other.days, one.days)[:, None] + np.arange(-_NEAREST, _NEAREST)
-        outside = (around < 0) | (around >= other.days.size)
-        around = np.clip(around, 0, other.days.size - 1)
-        apart = np.where(outside, np.inf, np.abs(other.days[around] - one.days[:, None]))
-        nearest = np.argsort(apart, axis=1, kind="stable")[:, :_NEAREST]
-        told_by = np.take_along_axis(around, nearest, axis=1)
-        near = np.where(np.take_along_axis(apart, nearest, axis=1) <= _APART_DAYS, other.level[told_by], np.nan)
-        count = np.isfinite(near).sum(axis=1)
-        told = count > 0
-        stands[row, told] = np.nanmedian(near[told], axis=1)
-        spread[row, told] = other.sd * np.sqrt(1.57 / count[told])
-    told = np.isfinite(stands).any(axis=0)
-    number = np.isfinite(stands[:, told]).sum(axis=0)
-    herd = np.nanmedian(stands[:, told], axis=0)
-    u_herd = np.sqrt(np.nanmean(spread[:, told] ** 2, axis=0) / number)
-    return one.days[told], one.level[told] - herd, np.hypot(one.sd, u_herd)
-
-
 def _of_scanner(name: str, scan: str, quantity: str, series: Sequence[_Series], alpha: float) -> list[Departure]:
     mine = [one for one in series if one.scanner == name]
+    phantoms = {one.phantom for one in mine}
     rest = [one for one in series if one.scanner != name]
-    t, y, sd, group, used = [], [], [], [], set()
-    own_phantom = False
-    for number, one in enumerate(mine):
-        same = [other for other in rest if other.phantom == one.phantom]
-        own_phantom = own_phantom or not same
-        others = same or rest
-        days, apart, u = _against(one, others)
-        t.append(days)
-        y.append(apart)
-        sd.append(u)
-        group.append(np.full(days.size, number, dtype=np.intp))
-        used |= {other.scanner for other in others}
-    days, apart, u = np.concatenate(t), np.concatenate(y), np.concatenate(sd)
-    groups: Ints = np.concatenate(group)
-    changes = find_changes(days, apart, u, groups, alpha=alpha)
+    same = [one for one in rest if one.phantom in phantoms]
+    others = same or rest
+    number: Ints = np.repeat(np.arange(len(mine)), [one.days.size for one in mine])
+    days, level = np.concatenate([one.days for one in mine]), np.concatenate([one.level for one in mine])
+    sd = np.repeat([one.sd for one in mine], [one.days.size for one in mine])
+    changes = find_changes(days, level, sd, number, alpha=alpha)
     told = []
-    for number, change in enumerate(changes):
-        if abs(change.size) < LEAST_PERCENT or not _moved_itself(change, mine, changes):
+    for place, change in enumerate(changes):
+        along = [other for other in changes if other is not change]
+        apart = _apart(change, others, along)
+        if apart is None or abs(apart.size) < LEAST_PERCENT:
             continue
-        undone = _undone(change, changes[number + 1 :])
-        told.append(
-            _departure(
-                name,
-                scan,
-                quantity,
-                change,
-                _now(change, days, apart, groups),
-                undone,
-                tuple(sorted(used)),
-                _reasons(mine, sorted(used), change, own_phantom),
-            )
-        )
+        now = _now(change, mine) - _now(change, others)
+        undone = _undone(change, changes[place + 1 :])
+        reasons = _reasons(mine, apart.others, change, not same)
+        told.append(_departure(name, scan, quantity, apart, now if np.isfinite(now) else apart.size, undone, reasons))
     return [one for one in told if not _only_a_return(one, told)]
 
 
-def _moved_itself(change: Change, mine: Sequence[_Series], changes: Sequence[Change]) -> bool:
-    """Whether the scanner's own level changed with the difference: else one of the others moved, not it."""
-    expected = change.size if change.kind == "step" else change.rate
-    sizes, weights = [], []
-    along = [other for other in changes if other is not change]
-    for one in mine:
-        size, u = measure(change, one.days, one.level, np.full(one.days.size, one.sd), along=along)
-        if np.isfinite(size) and u > 0:
-            sizes.append(size)
-            weights.append(1.0 / u**2)
-    return bool(sizes) and float(np.average(sizes, weights=weights)) / expected > 0.5
+@dataclass(frozen=True, slots=True, eq=False)
+class _Apart:
+    """A change of one scanner less what the others did at that time; u are standard uncertainties."""
+
+    change: Change
+    size: float
+    u_size: float
+    rate: float  # NaN for a step
+    u_rate: float
+    others: tuple[str, ...]  # that could tell
+
+
+def _apart(change: Change, others: Sequence[_Series], along: Sequence[Change]) -> _Apart | None:
+    """None where no other scanner can tell, or where the others moved alike."""
+    own, u_own = (change.size, change.u_size) if change.kind == "step" else (change.rate, change.u_rate)
+    theirs, spread, names = [], [], []
+    for one in others:
+        moved, u = measure(change, one.days, one.level, np.full(one.days.size, one.sd), along=along)
+        if np.isfinite(moved):
+            theirs.append(moved)
+            spread.append(u)
+            names.append(one.scanner)
+    if not theirs:
+        return None
+    alike = float(np.median(theirs))
+    left = own - alike
+    u = float(np.sqrt(u_own**2 + 1.57 * np.mean(np.square(spread)) / len(spread)))
+    if left / own < 0.5 or abs(left) < 2.0 * u:
+        return None
+    span = change.size / own
+    slope = change.kind == "slope"
+    return _Apart(
+        change,
+        left * span,
+        u * abs(span),
+        left if slope else float("nan"),
+        u if slope else float("nan"),
+        tuple(sorted(set(names))),
+    )
+
+
+def _now(change: Change, series: Sequence[_Series]) -> float:
+    """Median over series of where each stands in its last five runs against before the change; NaN if none can tell."""
+    stands = []
+    for one in series:
+        before = one.level[one.days < change.onset]
+        if before.size and before.size < one.level.size:
+            stands.append(float(np.median(one.level[-5:]) - np.median(before)))
+    return float(np.median(stands)) if stands else float("nan")
 
 
 def _undone(change: Change, later: Sequence[Change]) -> float | None:
@@ -166,20 +166,6 @@ def _undone(change: Change, later: Sequence[Change]) -> float | None:
 def _only_a_return(one: Departure, told: Sequence[Departure]) -> bool:
     """The step back of a scanner that had been apart is no departure of its own."""
     return any(other.returned == one.onset for other in told if other is not one)
-
-
-def _now(change: Change, days: Floats, apart: Floats, groups: Ints) -> float:
-    """Where the scanner stands now against where it stood before the change."""
-    before = days < change.onset
-    stands = []
-    for number in np.unique(groups):
-        here = groups == number
-        order = np.argsort(days[here], kind="stable")
-        last = apart[here][order][-5:]
-        old = apart[here & before]
-        if old.size:
-            stands.append(float(np.median(last) - np.median(old)))
-    return float(np.mean(stands)) if stands else change.size
 
 
 def _reasons(mine: Sequence[_Series], others: Sequence[str], change: Change, own_phantom: bool) -> tuple[str, ...]:
@@ -200,25 +186,23 @@ def _joined(names: Sequence[str]) -> str:
 
 
 def _departure(
-    name: str,
-    scan: str,
-    quantity: str,
-    change: Change,
-    now: float,
-    undone: float | None,
-    others: tuple[str, ...],
-    reasons: tuple[str, ...],
+    name: str, scan: str, quantity: str, apart: _Apart, now: float, undone: float | None, reasons: tuple[str, ...]
 ) -> Departure:
-    low, high = sorted(change.interval(0.95))
+    change = apart.change
+    reach = float(stdtrit(change.freedom, 0.975))
+    low, high = apart.size - reach * apart.u_size, apart.size + reach * apart.u_size
     onset, returned = day_of(change.onset), day_of(undone) if undone is not None else None
     between = (day_of(change.earliest), day_of(change.latest))
-    if change.kind == "slope":
-        rate = change.rate_interval() or (float("nan"), float("nan"))
-        how = f"has drifted away from the others by {change.rate:+.1f} % a year ({rate[0]:+.1f} to {rate[1]:+.1f})"
-        sentence = f"{quantity} ({scan}) on {name} {how} since about {onset} (between {between[0]} and {between[1]})"
+    slope = change.kind == "slope"
+    if slope:
+        least, most = apart.rate - reach * apart.u_rate, apart.rate + reach * apart.u_rate
+        sentence = (
+            f"{quantity} ({scan}) on {name} has drifted away from the others by {apart.rate:+.1f} % a year "
+            f"({least:+.1f} to {most:+.1f}) since about {onset} (between {between[0]} and {between[1]})"
+        )
     else:
         sentence = (
-            f"{quantity} ({scan}) on {name} left the others by {change.size:+.1f} % ({low:+.1f} to {high:+.1f}) "
+            f"{quantity} ({scan}) on {name} left the others by {apart.size:+.1f} % ({low:+.1f} to {high:+.1f}) "
             f"by {onset} (between {between[0]} and {between[1]})"
         )
     sentence += (
@@ -231,12 +215,12 @@ def _departure(
         change.kind,
         onset,
         between,
-        change.size,
+        apart.size,
         (low, high),
-        change.rate if change.kind == "slope" else None,
+        apart.rate if slope else None,
         now,
         returned,
-        others,
+        apart.others,
         reasons,
         sentence,
     )

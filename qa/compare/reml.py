@@ -13,6 +13,8 @@ import numpy as np
 
 from qa.words import Floats, Ints
 
+_MOST = 1e8  # no part is taken for more than so many times the rest
+
 
 @dataclass(frozen=True, slots=True)
 class Components:
@@ -74,7 +76,8 @@ def reml(values: Floats, scanner: Ints, vial: Ints, run: Ints) -> Components | N
     if told is None:
         return None
     profile = _Profile(sums, told)
-    relative = _lowest(profile) if told else np.zeros(0)
+    nothing = sums.square <= 1e-18 * sums.readings
+    relative = np.zeros(len(told)) if nothing else _lowest(profile)
     at = profile(relative)
     part: dict[str, float] = dict(zip(told, (relative * at.rest).tolist(), strict=True))
     scanners, vials, runs = (int(code.max()) + 1 for code in codes)
@@ -219,7 +222,7 @@ def _lowest(profile: _Profile) -> Floats:
                 np.ones(profile.parts),
                 jac=True,
                 method="L-BFGS-B",
-                bounds=[(0.0, None)] * profile.parts,
+                bounds=[(0.0, _MOST / one) for one in unit],
                 options={"ftol": 1e-15, "gtol": 1e-8, "maxiter": 200},
             )
             answer = found.x * unit

@@ -64,8 +64,12 @@ class Change:
         return self.rate - reach, self.rate + reach
 
 
-def wild(values: Floats, sd: Floats, width: float = 4.0) -> Bools:
-    """Values far from the running median of five: single bad runs, not shifts. (n,) -> (n,)."""
+def wild(values: Floats, sd: Floats) -> Bools:
+    """Values far from the running median of five: single bad runs, not shifts. (n,) -> (n,).
+
+    The scatter is the larger of what distances from that median and what successive differences say; in white noise
+    one value in some thousands is flagged, whatever the length.
+    """
     here = np.flatnonzero(np.isfinite(values))
     flags = np.zeros(values.shape, dtype=bool)
     if here.size < 5:
@@ -74,8 +78,10 @@ def wild(values: Floats, sd: Floats, width: float = 4.0) -> Bools:
     starts = np.clip(np.arange(x.size) - 2, 0, x.size - 5)
     middle = np.median(x[starts[:, None] + np.arange(5)], axis=1)
     distance = x - middle
-    scale = max(1.4826 * float(np.median(np.abs(distance))) * 1.15, 1e-9)
-    flags[here] = np.abs(distance) > width * np.maximum(scale, 0.7 * sd[here])
+    from_median = 1.15 * float(np.median(np.abs(distance)))
+    from_differences = float(np.median(np.abs(np.diff(x)))) / np.sqrt(2.0)
+    scale = 1.4826 * max(from_median, from_differences, 1e-9)
+    flags[here] = np.abs(distance) > 4.0 * (1.0 + 4.0 / here.size) * np.maximum(scale, 0.7 * sd[here])
     return flags
 
 

@@ -17,6 +17,7 @@ from qa.words import Floats
 
 FEWEST_VIALS = 4  # with fewer, one vial could pull the level: then each vial is charted as it is
 _PRIOR_FREEDOM = 8.0  # weight of the pooled scatter against a vial's own, in degrees of freedom
+_LEAST_OF_STATED = 0.05  # scatter is never taken for less than this part of the stated uncertainty
 _BIWEIGHT = 5.0  # in sigmas; 95 % efficient at 4.7
 
 
@@ -132,6 +133,7 @@ def _lane(segment: Segment, scan: str, quantity: str, columns: Ints) -> Lane:
     pooled = (float(ratio[0]) if np.isfinite(ratio[0]) else 1.0) * typical**2
     own = np.where(np.isfinite(own), own, pooled)
     base = (_PRIOR_FREEDOM * pooled + own_freedom * own) / (_PRIOR_FREEDOM + own_freedom)
+    base = np.maximum(base, (_LEAST_OF_STATED * typical) ** 2)
     later, later_freedom = _later_variance(residual, known, base)
     freedom = _PRIOR_FREEDOM + own_freedom + later_freedom
     variance = ((_PRIOR_FREEDOM + own_freedom) * base + later) / freedom
@@ -156,7 +158,8 @@ def _level_chart(level: Floats, known: Bools, variance: Floats, excess: Floats) 
     count = float(window.sum())
     level = level - (float(robust_mean(level[:, None], window[:, None])[0]) if count else 0.0)
     base, freedom = _window_variance(level[:, None], window[:, None])
-    floor = 1.0 / np.nansum(1.0 / variance, axis=1)  # noise of the vials alone
+    precision = np.nansum(1.0 / variance, axis=1)
+    floor = 1.0 / np.where(precision > 0, precision, np.nan)  # noise of the vials alone
     known_base = np.where(np.isfinite(base), base, floor)
     judged = ~window & (np.arange(len(level)) >= start)
     later, later_freedom = _later_variance(level[:, None], judged[:, None], np.maximum(known_base, floor)[:, None])

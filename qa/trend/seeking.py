@@ -16,6 +16,7 @@ from qa.trend.raising import RELEVANT, Raising, stands
 from qa.trend.streams import Ints, natural
 from qa.words import Floats
 
+_LEAST_SCATTER = 0.01  # percent
 _TOGETHER_DAYS = 28.0  # onsets this near each other may be one change
 
 
@@ -41,13 +42,13 @@ def _vial(label: str, family: list[Course], raising: Raising) -> list[Finding]:
     several = len({c.scanner for c in family}) > 1
     findings: list[Finding] = []
     rest = {id(c): c.own_of(label) for c in family}
-    shared = _changes(family, rest, raising.vial_alpha)
+    shared = _changes(label, family, rest, raising.vial_alpha)
     for change in shared:
         findings += _vial_change(label, change, shared, family, rest, several, raising)
     if several:  # in one scanner only
         for course in family:
             series = rest[id(course)] - np.sum([c.at(course.days) for c in course.aged.get(label, [])], axis=0)
-            own = _changes([course], {id(course): series}, raising.vial_alpha)
+            own = _changes(label, [course], {id(course): series}, raising.vial_alpha)
             for change in own:
                 left = {**rest, id(course): series}
                 findings += _vial_change(label, change, own, family, left, several, raising, course)
@@ -77,7 +78,9 @@ def _vial_change(
         moved = crossing[:1] or family[:1]
     if still and only is None:  # its size is that on the scanners where it moved
         change = min(
-            _changes(moved, rest, raising.vial_alpha), key=lambda one: abs(one.onset - change.onset), default=change
+            _changes(label, moved, rest, raising.vial_alpha),
+            key=lambda one: abs(one.onset - change.onset),
+            default=change,
         )
     watch = raising.limits_of(moved[0], (label,))[0]
     if abs(change.size) < RELEVANT * watch:
@@ -124,18 +127,14 @@ def level_findings(courses: Sequence[Course], raising: Raising) -> list[Finding]
     return findings
 
 
-def _changes(family: Sequence[Course], series: dict[int, Floats], alpha: float) -> tuple[Change, ...]:
+def _changes(label: str, family: Sequence[Course], series: dict[int, Floats], alpha: float) -> tuple[Change, ...]:
+    """Changes of one vial over several courses at once, each with a level of its own."""
     t, y, sd, group = [], [], [], []
     for number, course in enumerate(family):
         values = series[id(course)]
-        noise = np.full(
-            len(values),
-            1.4826 * np.nanmedian(np.abs(np.diff(values[np.isfinite(values)]))) / np.sqrt(2.0)
-            if np.isfinite(values).sum() > 2
-            else 1.0,
-        )
+        noise = np.full(len(values), max(float(course.sd[course.labels.index(label)]), _LEAST_SCATTER))
         here = np.isfinite(values) & ~wild(values, noise)
-        if here.sum() >= 3 and noise[0] > 0:
+        if here.sum() >= 3:
             t.append(course.days[here])
             y.append(values[here])
             sd.append(noise[here])

@@ -11,7 +11,7 @@ import numpy as np
 from scipy.special import fdtrc
 
 from qa.site.limits import LimitBlock, in_force
-from qa.trend.baseline import Segment
+from qa.trend.baseline import Segment, nanmedian
 from qa.trend.findings import Finding, FindingKind, day_of, key
 from qa.trend.logbook import near
 from qa.trend.pooled import Course
@@ -180,8 +180,10 @@ def spread_findings(course: Course, log: pd.DataFrame | None) -> list[Finding]:
         return []
     step = np.diff(own[whole], axis=0) / np.sqrt(2.0)
     before, recent = step[:-_RECENT], step[-_RECENT:]
-    usual = np.nanmedian(np.abs(before), axis=0) * 1.4826
+    usual = nanmedian(np.abs(before)) * 1.4826
     usual = np.where(usual > 0, usual, np.nan)
+    if not np.isfinite(before / usual).any() or not np.isfinite(recent / usual).any():
+        return []
     vials_there = float(np.isfinite(usual).sum())
     ratio = float(np.nanmedian((recent / usual) ** 2) / np.nanmedian((before / usual) ** 2))
     freedom_recent, freedom_before = 0.35 * _RECENT * vials_there, 0.35 * len(before) * vials_there
@@ -218,7 +220,8 @@ def restart_findings(block: Block, stretches: tuple[Segment, ...], log: pd.DataF
             count = np.isfinite(tail).sum(axis=0)
             if not len(tail) or not (count >= 3).any() or not (after.count[columns] >= 3).any():
                 continue
-            old = before.mean_ms[columns] * (1.0 + np.nanmean(np.where(count >= 3, tail, np.nan), axis=0) / 100.0)
+            told = np.where(count >= 3, np.nansum(tail, axis=0) / np.maximum(count, 1), np.nan)
+            old = before.mean_ms[columns] * (1.0 + told / 100.0)
             steps = 100.0 * (after.mean_ms[columns] / old - 1.0)
             steps = steps[np.isfinite(steps)]
             if steps.size < 2:
