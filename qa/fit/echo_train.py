@@ -17,9 +17,9 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from qa.fit import forms, varpro
-from qa.fit.descend import Model, descend
+from qa.fit.curve_map import GRID, t2_by_curves
 from qa.fit.estimate import Estimate, Signals
-from qa.fit.noise import expected_magnitude, magnitude_sd
+from qa.fit.noise import magnitude_sd
 from qa.fit.polarity import rate_range
 from qa.fit.profiles import unknown_profiles
 from qa.fit.quality import COMMON, ECHO_CHECKS, Check, Facts, check_signals, conclude, residual_scale, usable
@@ -29,13 +29,12 @@ from qa.words import Floats, Ints, Quantity, State
 FIELD_SD = (0.1, 0.05, 0.05, 0.1)  # prior of the transmit field: level, slopes and bow, relative at 100 mm
 FIELD_REACH_MM = 100.0
 PROFILE_SD = 2.0  # prior of the profile's components, over their spread among the pulse pairs
+NOISE_SD = 0.2  # prior of the logarithm of the noise behind the floor, over what differences of voxels say
 FEW_VIALS = 3  # with fewer, the field is taken to be the same for all
 GUESSED_T1_OVER_T2 = 5.0
 LONGEST_T1_MS = 4500.0  # of a liquid at room temperature, with a margin over pure water
 U_LOG_GUESSED_T1 = 0.7
 ROBUST_ROUNDS = 1
-MAP_REACH = 3.0  # a voxel's T2 is looked for within this factor of its vial's
-MAP_POINTS = 15
 
 
 @dataclass(frozen=True, slots=True)
@@ -131,10 +130,9 @@ class EchoTrain:
         known = np.flatnonzero(np.isfinite(centre))
         if not known.size or "profile_1" not in of_vials.shared:
             return np.full(len(values), np.nan)
-        curves = np.full((len(centre), MAP_POINTS, len(signals.times_ms)), np.nan)
-        grid = np.linspace(-np.log(MAP_REACH), np.log(MAP_REACH), MAP_POINTS)
-        curves[known] = _curves(signals, of_vials, owner, known, grid)
-        return _map_by_curves(values, signals, owner, centre, curves, grid)
+        curves = np.full((len(centre), len(GRID), len(signals.times_ms)), np.nan)
+        curves[known] = _curves(signals, of_vials, owner, known)
+        return t2_by_curves(values, signals, owner, centre, curves)
 
 
 def echo_numbers(times_ms: Floats) -> tuple[float, Ints]:
@@ -159,7 +157,7 @@ def _train(signals: Signals, spacing: float, echoes: Ints, t1: Floats, noise: fl
         x, y = signals.x_mm / FIELD_REACH_MM, signals.y_mm / FIELD_REACH_MM
         field = np.stack([np.ones(n), x, y, x * x + y * y], axis=1)
     profiles = unknown_profiles(round(float(signals.refocusing_deg), 1))
-    sd = np.concatenate([FIELD_SD[: field.shape[1]], np.full(profiles.components.shape[1], PROFILE_SD)])
+    sd = np.concatenate([FIELD_SD[: field.shape[1]], np.full(profiles.components.shape[1], PROFILE_SD), [NOISE_SD]])
     usable_spacing = spacing if spacing > 0 else float(np.median(np.diff(signals.times_ms)))
     return Train(usable_spacing, echoes, t1, signals.tr_ms, noise, field, profiles, sd)
 
@@ -229,7 +227,7 @@ def _findings(found: Joint, train: Train, size: Spread) -> dict[str, float]:
     """Run-level findings for trending, at the plate's centre."""
     fields = train.field.shape[1]
     level = 1.0 + found.shared[:1]
-    share = np.maximum(train.profiles.at(level, found.shared[fields:])[0][0], 0.0)
+    share = np.maximum(train.profiles.at(level, found.shared[fields:-1])[0][0], 0.0)
     angle = float(level[0]) * train.profiles.angle
     excited = share / np.sin(angle / 2.0)  # from the plateau's signal to the excited signal
     weight = excited / excited.sum()
@@ -242,11 +240,11 @@ def _findings(found: Joint, train: Train, size: Spread) -> dict[str, float]:
         "transmit_level": float(level[0]),
         "u_transmit_level": float(np.sqrt(size.shared[0, 0])),
     }
-    return findings | {f"profile_{k + 1}": float(c) for k, c in enumerate(found.shared[fields:])}
+    return findings | {f"profile_{k + 1}": float(c) for k, c in enumerate(found.shared[fields:-1])}
 
 
-def _curves(signals: Signals, of_vials: Estimate, owner: Ints, known: Ints, grid: Floats) -> Floats:
-    """Amplitudes (known, grid, m) of the vials at T2 exp(grid)."""
+def _curves(signals: Signals, of_vials: Estimate, owner: Ints, known: Ints) -> Floats:
+    """Amplitudes (known, grid, m) of the vials at T2 exp(GRID)."""
     spacing, echoes = echo_numbers(np.asarray(signals.times_ms, float))
     first = np.array([np.flatnonzero(owner == row)[0] if (owner == row).any() else 0 for row in known])
     t1 = _given(signals.t1_ms, len(owner))[first]
@@ -254,7 +252,7 @@ def _curves(signals: Signals, of_vials: Estimate, owner: Ints, known: Ints, grid
     t1 = np.where(np.isfinite(t1), t1, np.clip(GUESSED_T1_OVER_T2 * centre, centre, LONGEST_T1_MS))
     profiles = unknown_profiles(round(float(signals.refocusing_deg), 1))
     sizes = np.array([of_vials.shared[f"profile_{k + 1}"] for k in range(profiles.components.shape[1])])
-    points = len(grid)
+    points = len(GRID)
     level = np.repeat(of_vials.parameters[known, 2], points)
     train = Train(
         spacing,
@@ -264,61 +262,12 @@ def _curves(signals: Signals, of_vials: Estimate, owner: Ints, known: Ints, grid
         0.0,
         (level - 1.0)[:, None],
         profiles,
-        np.ones(1 + len(sizes)),
+        np.ones(2 + len(sizes)),
     )
-    t2 = (centre[:, None] * np.exp(grid)).ravel()
-    shared = np.concatenate([[1.0], sizes])
+    t2 = (centre[:, None] * np.exp(GRID)).ravel()
+    shared = np.concatenate([[1.0], sizes, [0.0]])
     shape = with_recovery(train, t2, shared).amplitudes(t2, shared)
     return shape.reshape(len(known), points, -1)
-
-
-def _map_by_curves(
-    values: Floats, signals: Signals, owner: Ints, centre: Floats, curves: Floats, grid: Floats
-) -> Floats:
-    """T2 (v,) by descent on curves that are interpolated in ln T2 between the points of `grid`."""
-    noise = float(np.nan_to_num(signals.noise))
-    use = np.flatnonzero(np.isfinite(centre[owner]))
-    out = np.full(len(values), np.nan)
-    if not use.size:
-        return out
-    slopes = np.gradient(curves, grid, axis=1)
-    middle = len(grid) // 2
-    for first in range(0, len(use), varpro.CHUNK_ROWS):
-        rows = use[first : first + varpro.CHUNK_ROWS]
-        own = owner[rows]
-        at_vial = curves[own, middle]
-        m0 = np.einsum("rm,rm->r", values[rows], at_vial) / np.einsum("rm,rm->r", at_vial, at_vial)
-        start = np.stack([np.ones(len(rows)), np.maximum(m0, 1e-12)], axis=1)
-        amplitude = m0[:, None] * at_vial
-        sd = noise if signals.signed or noise == 0 else magnitude_sd(amplitude, noise)
-        weights = np.ones_like(amplitude) / np.square(sd if noise > 0 else 1.0)
-        model = _interpolated(curves, slopes, grid, own, 0.0 if signals.signed else noise)
-        found = descend(values[rows], model, start, weights, positive=2, tolerance=1e-4, most_steps=20)
-        factor = found.parameters[:, 0]
-        good = found.converged & (np.abs(np.log(factor)) < 0.999 * grid[-1])
-        out[rows] = np.where(good & np.isfinite(signals.values[rows]).all(axis=1), factor * centre[own], np.nan)
-    return out
-
-
-def _interpolated(curves: Floats, slopes: Floats, grid: Floats, own: Ints, noise: float) -> Model:
-    """Expected magnitude of M0 times the vial's curve at T2 = factor x the vial's; parameters factor, M0."""
-    step = grid[1] - grid[0]
-
-    def model(parameters: Floats, rows: Ints) -> tuple[Floats, Floats]:
-        factor, m0 = parameters[:, 0], parameters[:, 1:2]
-        place = np.clip((np.log(factor) - grid[0]) / step, 0.0, len(grid) - 1.000001)
-        index = place.astype(np.intp)
-        u = (place - index)[:, None]
-        vial = own[rows]
-        c0, c1 = curves[vial, index], curves[vial, index + 1]
-        s0, s1 = slopes[vial, index] * step, slopes[vial, index + 1] * step
-        a, b = 3.0 * (c1 - c0) - 2.0 * s0 - s1, s0 + s1 - 2.0 * (c1 - c0)
-        shape = c0 + u * (s0 + u * (a + u * b))
-        by_log = (s0 + u * (2.0 * a + 3.0 * u * b)) / step
-        mean, slope = expected_magnitude(m0 * shape, noise) if noise else (m0 * shape, np.ones_like(shape))
-        return mean, np.stack([slope * m0 * by_log / factor[:, None], slope * shape], axis=2)
-
-    return model
 
 
 _CHECKS: tuple[Check, ...] = (

@@ -30,13 +30,13 @@ SHORTER = 0.7  # a step is tried again, shorter, where its parabola is lowest be
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Train:
-    """What is known of a train before the fit; n vials, m echoes, s shared parameters (field first, then profile)."""
+    """What is known of a train before the fit; n vials, m echoes, s shared parameters: field, profile, log of noise."""
 
     spacing_ms: float
     echoes: Ints  # (m,), 1 for the first
     t1_ms: Floats  # (n,)
     tr_ms: float  # NaN: taken as long
-    noise: float  # of one voxel's channel; 0 where unknown or where the values are signed
+    noise: float  # of one voxel's channel, near enough; 0 where unknown or where the values are signed
     field: Floats  # (n, f), smooth functions of place; transmit level = 1 + field @ their sizes
     profiles: Profiles
     prior_sd: Floats  # (s,), of shared parameters around 0
@@ -52,7 +52,7 @@ class Train:
         return np.asarray(np.einsum("mnq,nq->nm", kept, scale * share))
 
     def slopes(self, t2_ms: Floats, shared: Floats) -> tuple[Floats, Floats, Floats]:
-        """Amplitudes (n, m) for M = 1 and their derivatives by ln T2 (n, m) and by the shared parameters (n, m, s)."""
+        """Amplitudes (n, m) for M = 1 and their derivatives by ln T2 (n, m) and by field and profile (n, m, s - 1)."""
         share, share_by_level, share_by_size, angle, scale = self._at(shared)
         n, q = share.shape
         t1, t2 = np.repeat(self.t1_ms, q), np.repeat(t2_ms, q)
@@ -75,7 +75,7 @@ class Train:
         angle = level[:, None] * self.profiles.angle
         scale = 1.0 / np.sin(angle / 2.0)
         return (
-            *self.profiles.at(level, shared[fields:]),
+            *self.profiles.at(level, shared[fields:-1]),
             angle,
             scale if self.recovered is None else scale * self.recovered,
         )
@@ -185,16 +185,17 @@ class _Point:
 def _evaluate(values: Floats, train: Train, weights: Floats, log_t2: Floats, log_m0: Floats, shared: Floats) -> _Point:
     shape, by_t2, by_shared = train.slopes(np.exp(log_t2), shared)
     m0 = np.exp(log_m0)[:, None]
-    fitted, slope = (
-        expected_magnitude(m0 * shape, train.noise) if train.noise > 0 else (m0 * shape, np.ones_like(shape))
-    )
+    amplitude = m0 * shape
+    fitted, slope = amplitude, np.ones_like(shape)
+    if train.noise > 0:
+        fitted, slope = expected_magnitude(amplitude, train.noise * float(np.exp(shared[-1])))
+    by_noise = fitted - slope * amplitude  # a magnitude's mean grows in proportion with amplitude and noise together
     scaled = slope * m0
-    jacobian = np.concatenate(
-        [(scaled * by_t2)[:, :, None], (scaled * shape)[:, :, None], scaled[:, :, None] * by_shared], axis=2
-    )
+    own = (scaled * by_t2)[:, :, None], (scaled * shape)[:, :, None]
+    jacobian = np.concatenate([*own, scaled[:, :, None] * by_shared, by_noise[:, :, None]], axis=2)
     chi2 = np.einsum("nm,nm->n", weights, np.square(values - fitted))
     total = float(chi2.sum() + np.sum(np.square(shared / train.prior_sd)))
-    return _Point(log_t2, log_m0, shared, fitted, m0 * shape, jacobian, chi2, total)
+    return _Point(log_t2, log_m0, shared, fitted, amplitude, jacobian, chi2, total)
 
 
 def _step(
