@@ -39,9 +39,8 @@ def server():
     place.chmod(0o777)
     data = place / "data"
     quiet = {"check": True, "capture_output": True, "cwd": "/"}
-    subprocess.run(
-        _as_server(binaries / "initdb", "-D", data, "-U", USER, "-A", "trust", "-E", "UTF8", "--no-sync"), **quiet
-    )
+    make = (binaries / "initdb", "-D", data, "-U", USER, "-A", "trust", "-E", "UTF8", "--no-sync")
+    subprocess.run(_as_server(*make), **quiet)
     options = f"-c listen_addresses= -c unix_socket_directories={place} -c fsync=off"
     start = _as_server(binaries / "pg_ctl", "-D", data, "-w", "-o", options, "-l", place / "log", "start")
     subprocess.run(start, check=True, stdout=subprocess.DEVNULL, stderr=subprocess.DEVNULL, cwd="/")

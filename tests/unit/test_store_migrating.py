@@ -10,7 +10,8 @@ from book_factory import fill
 from sqlalchemy import create_engine
 
 from qa.errors import NoBookError, OldBookError, StoreError
-from qa.store import migrate, open_book
+from qa.places import shipped
+from qa.store import migrate, migrating, open_book
 from qa.store import opening as opening_module
 from qa.store import revision as revision_module
 from qa.store.models import Base
@@ -67,12 +68,7 @@ def test_migrating_what_is_up_to_date_does_nothing(tmp_path):
 def test_migrating_copies_the_book_first_and_keeps_every_row(tmp_path, monkeypatch):
     """A next version's migration stands in: it adds a table."""
     scripts = tmp_path / "migrations"
-    shipped = opening_module.__file__  # the real scripts lie beside the package
-    assert shipped
-    from qa.places import shipped as folder
-    from qa.store import migrating
-
-    original = folder("migrations")
+    original = shipped("migrations")
     (scripts / "versions").mkdir(parents=True)
     for name in ("env.py", "script.py.mako"):
         (scripts / name).write_bytes((original / name).read_bytes())

@@ -78,7 +78,8 @@ def test_a_changed_value_is_named(path, table, setting):
 def test_a_row_that_nobody_wrote_is_named(path):
     change(
         path,
-        "INSERT INTO log_entry SELECT entry + 100, at, scanner, phantom, kind, text, celsius, restart_baseline, source, who, entered_at FROM log_entry LIMIT 1",
+        "INSERT INTO log_entry SELECT entry + 100, at, scanner, phantom, kind, text, celsius, restart_baseline, "
+        "source, who, entered_at FROM log_entry LIMIT 1",
     )
     assert "row-unwitnessed" in codes(path)
 
