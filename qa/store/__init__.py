@@ -6,9 +6,10 @@ Knows nothing of DICOM, fitting, charts or HTML.
 
 `open_book` gives a `Book`; its verbs lie each in a module: recording, holding, frames (reading back), logbook,
 tolerances (limits), decisions (findings and rulings), audit (and the ledger), export. Below them: `desk` (one
-transaction, one clock), `ledger` and `covers` (what is witnessed, and how), `models` and `records` (the tables),
-`columns` (types alike in SQLite and PostgreSQL), `engine` (the only module that knows the two apart), `opening`,
-`migrating` (the only one that loads Alembic) and `tidy` (the only one that needs pandas at once).
+transaction, one clock), `ledger` and `covers` (what is witnessed, and how), `lenient` (reads what was tampered with),
+`models` and `records` (the tables), `columns` (types alike in SQLite and PostgreSQL), `engine` (the only module that
+knows the two apart), `opening`, `migrating` (the only one that loads Alembic) and `tidy` (the only one that needs
+pandas at once).
 
 Rows are added, never overwritten: a remeasured run gets a new generation. What may change (a verdict, a held file's
 fate, a finding) is witnessed by the ledger each time, in the transaction that changes it.

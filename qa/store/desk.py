@@ -9,6 +9,7 @@ from typing import Any
 
 from sqlalchemy import Connection, Engine, insert
 
+from qa.errors import StoreError, VialbookError
 from qa.store.covers import Covers, Row, as_stored
 from qa.store.engine import explained, is_sqlite
 from qa.store.ledger import Anchor, append, lock_head
@@ -36,7 +37,7 @@ class Desk:
 
     @contextmanager
     def _read(self) -> Iterator[Connection]:
-        with explained(self._where), self._reader.begin() as connection:
+        with explained(self._where), readable(self._where), self._reader.begin() as connection:
             yield connection
 
     @contextmanager
@@ -49,6 +50,18 @@ class Desk:
         self, connection: Connection, kind: str, subject: str, payload: Mapping[str, Any], covers: Covers | None = None
     ) -> Anchor:
         return append(connection, self.now(), kind, subject, payload, covers)
+
+
+@contextmanager
+def readable(where: str) -> Iterator[None]:
+    """A stored value that is not of its column's kind (somebody wrote it by hand) becomes a StoreError."""
+    try:
+        yield
+    except VialbookError:
+        raise
+    except ValueError as error:
+        remedy = "Somebody or something else wrote it. Run: vialbook audit, which names the rows."
+        raise StoreError(f"a stored value cannot be read: {error}", where, remedy) from error
 
 
 def add_rows(connection: Connection, table: type[Base], rows: Sequence[Mapping[str, Any]]) -> list[Row]:

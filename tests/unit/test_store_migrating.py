@@ -1,7 +1,11 @@
 """Opening what is there: an older book, a newer one, somebody else's database; and bringing an older one up to date."""
 
+import os
+import shutil
 import sqlite3
-from contextlib import closing
+import tempfile
+from contextlib import closing, contextmanager
+from pathlib import Path
 
 import pytest
 from alembic.autogenerate import compare_metadata
@@ -10,6 +14,7 @@ from book_factory import fill
 from sqlalchemy import create_engine
 
 from qa.errors import NoBookError, OldBookError, StoreError
+from qa.intake.series import Held
 from qa.places import shipped
 from qa.store import migrate, migrating, open_book
 from qa.store import opening as opening_module
@@ -136,3 +141,53 @@ def test_an_unknown_kind_of_database_is_named():
     for url in ("mysql://a@b/c", "nonsense"):
         with pytest.raises(StoreError, match=r"sqlite:///"):
             open_book(url)
+
+
+@contextmanager
+def not_as_root():
+    """Root may write everywhere: files are then used as the system's least user (any number but 0)."""
+    root = os.geteuid() == 0
+    if root:
+        os.seteuid(65534)
+    try:
+        yield
+    finally:
+        if root:
+            os.seteuid(0)
+
+
+@pytest.fixture
+def public():
+    """A folder that every user of the machine can reach; pytest's own belong to one user."""
+    folder = Path(tempfile.mkdtemp(prefix="book"))
+    folder.chmod(0o755)
+    yield folder
+    folder.chmod(0o755)
+    shutil.rmtree(folder)
+
+
+def test_a_read_only_book_can_be_read_and_is_not_written(public):
+    path = public / "book.sqlite"
+    with open_book(path) as book:
+        fill(book, weeks=1)
+        kept = len(book.readings())
+        assert book.audit() == []
+    path.chmod(0o444)
+    public.chmod(0o777)  # the log beside the file may be made
+    with not_as_root(), open_book(path, create=False) as book:
+        assert len(book.readings()) == kept
+        with pytest.raises(StoreError, match=r"readonly(.|\n)*Check the permissions"):
+            book.hold([Held("a.dcm", "truncated", "cut short", "a" * 64)])
+        assert book.audit() == []
+
+
+def test_a_book_in_a_read_only_folder_says_so(public):
+    path = public / "book.sqlite"
+    with open_book(path) as book:
+        fill(book, weeks=1)
+    content = path.read_bytes()
+    path.chmod(0o444)
+    public.chmod(0o555)
+    with not_as_root(), pytest.raises(StoreError, match=r"book\.sqlite(.|\n)*Check the permissions"):
+        open_book(path)
+    assert path.read_bytes() == content
