@@ -2,7 +2,7 @@
 
 The model of one reading, in percent, is ``mean + scanner + vial + scanner.vial + run(scanner) + rest``, all random.
 Runs are many and independent given their scanner, so they are absorbed in closed form, runs with the same vials
-together; what is left is a small dense system.
+together; then each scanner by itself; what is left is a small dense system, the mean and the vials.
 """
 
 from __future__ import annotations
@@ -33,23 +33,18 @@ class Components:
 
 
 @dataclass(frozen=True, slots=True, eq=False)
-class _Sums:
-    """Sufficient statistics; cells are the scanner-vial pairs that occur (c), patterns the kinds of run (p)."""
+class _Block:
+    """Sufficient statistics of one scanner; its vials are its cells (c), its kinds of run patterns (p)."""
 
-    cell_scanner: Ints  # (c,)
-    cell_vial: Ints  # (c,)
+    vial: Ints  # (c,)
     count: Floats  # (c,) readings
     total: Floats  # (c,) sum of readings
     square: float  # sum of squared readings
     pattern: Floats  # (p, c) readings of each cell in a run of this kind
+    size: Floats  # (p,) readings in such a run
     runs: Floats  # (p,) runs of this kind
     run_total: Floats  # (p,) sum over those runs of the run's sum
     run_square: Floats  # (p,) sum over those runs of the run's sum squared
-
-    @property
-    def readings(self) -> float:
-        """All readings."""
-        return float(self.count.sum())
 
 
 def reml(values: Floats, scanner: Ints, vial: Ints, run: Ints) -> Components | None:
@@ -71,16 +66,17 @@ def reml(values: Floats, scanner: Ints, vial: Ints, run: Ints) -> Components | N
     """
     codes = [np.unique(code, return_inverse=True)[1] for code in (scanner, vial, run)]
     centre = float(np.mean(values)) if len(values) else 0.0
-    sums = _summed(np.asarray(values, dtype=np.float64) - centre, *codes)
-    told = _told_apart(sums, codes)
+    y = np.asarray(values, dtype=np.float64) - centre
+    blocks = [_summed(y[here], codes[1][here], codes[2][here]) for here in _each(codes[0])]
+    scanners, vials, runs = (int(code.max(initial=-1)) + 1 for code in codes)
+    told = _told_apart(blocks, scanners, vials, runs, len(y))
     if told is None:
         return None
-    profile = _Profile(sums, told)
-    nothing = sums.square <= 1e-18 * sums.readings
+    profile = _Profile(blocks, told, vials, len(y))
+    nothing = float(y @ y) <= 1e-18 * len(y)
     relative = np.zeros(len(told)) if nothing else _lowest(profile)
     at = profile(relative)
     part: dict[str, float] = dict(zip(told, (relative * at.rest).tolist(), strict=True))
-    scanners, vials, runs = (int(code.max()) + 1 for code in codes)
     return Components(
         scanner=part.get("scanner"),
         vial=part.get("vial"),
@@ -91,25 +87,31 @@ def reml(values: Floats, scanner: Ints, vial: Ints, run: Ints) -> Components | N
         scanners=scanners,
         vials=vials,
         runs=runs,
-        readings=int(sums.readings),
+        readings=len(y),
     )
 
 
-def _summed(y: Floats, scanner: Ints, vial: Ints, run: Ints) -> _Sums:
-    pairs, cell = np.unique(np.stack([scanner, vial], axis=1), axis=0, return_inverse=True)
-    cell = cell.ravel()
-    in_run = np.zeros((run.max() + 1, len(pairs)))
-    np.add.at(in_run, (run, cell), 1.0)
-    run_sum = _totals(run, y)
+def _each(code: Ints) -> list[Ints]:
+    """Where each code stands."""
+    order = np.argsort(code, kind="stable")
+    return np.split(order, np.cumsum(np.bincount(code))[:-1]) if code.size else []
+
+
+def _summed(y: Floats, vial: Ints, run: Ints) -> _Block:
+    vials, cell = np.unique(vial, return_inverse=True)
+    runs, row = np.unique(run, return_inverse=True)
+    in_run = np.zeros((runs.size, vials.size))
+    np.add.at(in_run, (row, cell), 1.0)
+    run_sum = _totals(row, y)
     pattern, kind = np.unique(in_run, axis=0, return_inverse=True)
     kind = kind.ravel()
-    return _Sums(
-        pairs[:, 0],
-        pairs[:, 1],
+    return _Block(
+        vials,
         _totals(cell),
         _totals(cell, y),
         float(y @ y),
         pattern,
+        pattern.sum(axis=1),
         _totals(kind),
         _totals(kind, run_sum),
         _totals(kind, run_sum**2),
@@ -121,25 +123,24 @@ def _totals(code: Ints, values: Floats | None = None) -> Floats:
     return np.asarray(np.bincount(code, values), dtype=np.float64)
 
 
-def _told_apart(sums: _Sums, codes: list[Ints]) -> tuple[str, ...] | None:
+def _told_apart(blocks: list[_Block], scanners: int, vials: int, runs: int, readings: int) -> tuple[str, ...] | None:
     """Which parts these readings can tell from the others; None if not even the rest can be."""
-    scanners, vials, runs = (int(code.max()) + 1 for code in codes)
-    cells = len(sums.count)
-    run_of_many = bool((sums.pattern.sum(axis=1) > 1).any())
+    cells = sum(block.vial.size for block in blocks)
+    run_of_many = any((block.size > 1).any() for block in blocks)
     several_runs = runs > scanners
     told = []
     if scanners > 1:
         told.append("scanner")
     if vials > 1:
         told.append("vial")
-    repeated = sums.readings > cells + (runs - scanners if several_runs and run_of_many else 0)
+    repeated = readings > cells + (runs - scanners if several_runs and run_of_many else 0)
     if scanners > 1 and vials > 1 and cells > scanners + vials - 1 and repeated:
         told.append("scanner_vial")
-    if several_runs and run_of_many and runs < sums.readings:
+    if several_runs and run_of_many and runs < readings:
         told.append("run")
-    if "scanner_vial" not in told and sums.readings <= scanners + vials - 1:
+    if "scanner_vial" not in told and readings <= scanners + vials - 1:
         return None
-    return tuple(told) if repeated or "scanner_vial" not in told else None
+    return tuple(told)
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -152,55 +153,106 @@ class _At:
     mean: float
 
 
+@dataclass(slots=True, eq=False)
+class _Absorbed:
+    """One scanner with its runs and its own effects absorbed; (c, c), (c,) and so on, in units of the rest."""
+
+    block: _Block
+    kept: Floats  # (p,) 1 / (1 + run variance * readings in the run)
+    shrink: Floats  # (c, c) covariance of the cells' own effects after seeing the readings
+    inner: Floats  # (c, c)
+    outer: Floats  # (c, c) inner less what the scanner's own effects take
+    along: Floats  # (c,)
+    left: Floats  # (c,) along less what they take
+    square: float
+    volume: float
+
+
 class _Profile:
     """Minus twice the restricted likelihood of the variances relative to the rest, the rest profiled out."""
 
-    def __init__(self, sums: _Sums, told: tuple[str, ...]) -> None:
-        self.sums, self.with_run, self.parts = sums, "run" in told, len(told)
-        own = {
-            "scanner": np.eye(int(sums.cell_scanner.max()) + 1)[sums.cell_scanner],
-            "vial": np.eye(int(sums.cell_vial.max()) + 1)[sums.cell_vial],
-            "scanner_vial": np.eye(len(sums.count)),
-        }
-        self.designs = [own[name] for name in told if name != "run"]
-        self.design = np.concatenate([np.ones((len(sums.count), 1)), *self.designs], axis=1)
-        self.widths = [design.shape[1] for design in self.designs]
-        self.size = sums.pattern.sum(axis=1)
-        self.freedom = sums.readings - 1.0
+    def __init__(self, blocks: list[_Block], told: tuple[str, ...], vials: int, readings: int) -> None:
+        self.blocks, self.told, self.parts, self.vials = blocks, told, len(told), vials
+        self.freedom = readings - 1.0
 
     def __call__(self, relative: Floats) -> _At:
         """At `relative` variances, in the order of the parts told apart."""
-        sums = self.sums
-        of_run = float(relative[-1]) if self.with_run else 0.0
-        kept = 1.0 / (1.0 + of_run * self.size)
-        absorbed = of_run * kept
-        inner = np.diag(sums.count) - (sums.pattern.T * (sums.runs * absorbed)) @ sums.pattern
-        along = sums.total - sums.pattern.T @ (absorbed * sums.run_total)
-        square = sums.square - float(absorbed @ sums.run_square)
-        scale = np.concatenate([[1.0], np.repeat(np.sqrt(relative[: len(self.widths)]), self.widths)])
-        x = self.design * scale
-        system = x.T @ inner @ x
-        system[np.diag_indices_from(system)] += np.concatenate([[0.0], np.ones(len(scale) - 1)])
+        part = dict(zip(self.told, relative.tolist(), strict=True))
+        absorbed = [_absorb(block, part) for block in self.blocks]
+        root = float(np.sqrt(part.get("vial", 0.0)))
+        width = 1 + self.vials
+        system, right = np.zeros((width, width)), np.zeros(width)  # the mean, then the vials
+        for one in absorbed:
+            where = np.concatenate([[0], 1 + one.block.vial])
+            design = _design(one.block, root)
+            system[np.ix_(where, where)] += design.T @ one.outer @ design
+            right[where] += design.T @ one.left
+        system[np.arange(1, width), np.arange(1, width)] += 1.0
         lower = np.linalg.cholesky(system)
-        spread = np.linalg.solve(lower, x.T)  # x C^-1 x' = spread' spread
-        right = spread @ along
-        fitted = spread.T @ right  # of each cell
-        rss = max(square - float(right @ right), 1e-300)
-        volume = -float(sums.runs @ np.log(kept)) + 2.0 * float(np.log(np.diag(lower)).sum())
+        solved = np.linalg.solve(lower, right)
+        inverse = np.linalg.solve(lower.T, np.linalg.solve(lower, np.eye(width)))
+        effects = inverse @ right
+        rss = max(sum(one.square for one in absorbed) - float(solved @ solved), 1e-300)
+        volume = sum(one.volume for one in absorbed) + 2.0 * float(np.log(np.diag(lower)).sum())
+        gradient = self._gradient(absorbed, root, inverse, effects, rss)
+        return _At(volume + self.freedom * float(np.log(rss)), gradient, rss / self.freedom, float(effects[0]))
 
-        through = spread @ inner
-        projected = inner - through.T @ through
-        left = along - inner @ fitted
-        trace = [float(np.einsum("ci,cd,di->", d, projected, d)) for d in self.designs]
-        pull = [float(((d.T @ left) ** 2).sum()) for d in self.designs]
-        if self.with_run:
-            of_fit = sums.pattern @ fitted
-            reach = np.square(spread @ sums.pattern.T).sum(axis=0)
-            trace.append(float(sums.runs @ (self.size * kept - kept**2 * reach)))
-            pull.append(float(kept**2 @ (sums.run_square - 2.0 * of_fit * sums.run_total + sums.runs * of_fit**2)))
-        gradient = np.array(trace) - self.freedom / rss * np.array(pull)
-        mean = float(np.linalg.solve(lower.T, right)[0])
-        return _At(volume + self.freedom * float(np.log(rss)), gradient, rss / self.freedom, mean)
+    def _gradient(self, absorbed: list[_Absorbed], root: float, inverse: Floats, effects: Floats, rss: float) -> Floats:
+        trace, pull = dict.fromkeys(self.told, 0.0), dict.fromkeys(self.told, 0.0)
+        of_vial = np.zeros(self.vials)
+        vial_by_effect = np.zeros((self.vials, 1 + self.vials))
+        for one in absorbed:
+            where = np.concatenate([[0], 1 + one.block.vial])
+            design, mine = _design(one.block, root), inverse[np.ix_(where, where)]
+            through = one.outer @ design
+            apart = one.left - through @ effects[where]
+            if "scanner" in trace:
+                of_one = through.sum(axis=0)
+                trace["scanner"] += float(one.outer.sum() - of_one @ mine @ of_one)
+                pull["scanner"] += float(apart.sum()) ** 2
+            if "scanner_vial" in trace:
+                trace["scanner_vial"] += float(np.trace(one.outer) - np.sum((through @ mine) * through))
+                pull["scanner_vial"] += float(apart @ apart)
+            if "vial" in trace:
+                trace["vial"] += float(np.trace(one.outer))
+                of_vial[one.block.vial] += apart
+                vial_by_effect[np.ix_(one.block.vial, where)] += through
+            if "run" in trace:
+                block, kept = one.block, one.kept
+                fixed = design - one.shrink @ (one.inner @ design)
+                fitted = design @ effects[where]
+                fitted = fitted + one.shrink @ (one.along - one.inner @ fitted)
+                of_fit = block.pattern @ fitted
+                spread = one.shrink + fixed @ mine @ fixed.T
+                reach = np.sum((block.pattern @ spread) * block.pattern, axis=1)
+                trace["run"] += float(block.runs @ (block.size * kept - kept**2 * reach))
+                squares = block.run_square - 2.0 * of_fit * block.run_total + block.runs * of_fit**2
+                pull["run"] += float(kept**2 @ squares)
+        if "vial" in trace:
+            trace["vial"] -= float(np.sum((vial_by_effect @ inverse) * vial_by_effect))
+            pull["vial"] = float(of_vial @ of_vial)
+        return np.array([trace[name] - self.freedom / rss * pull[name] for name in self.told])
+
+
+def _design(block: _Block, root: float) -> Floats:
+    """(c, 1 + c): the mean and the scanner's vials, these in units of their standard deviation."""
+    return np.concatenate([np.ones((block.vial.size, 1)), root * np.eye(block.vial.size)], axis=1)
+
+
+def _absorb(block: _Block, part: dict[str, float]) -> _Absorbed:
+    of_run, cells = part.get("run", 0.0), block.vial.size
+    kept = 1.0 / (1.0 + of_run * block.size)
+    taken = of_run * kept
+    inner = np.diag(block.count) - (block.pattern.T * (block.runs * taken)) @ block.pattern
+    along = block.total - block.pattern.T @ (taken * block.run_total)
+    own = part.get("scanner", 0.0) + part.get("scanner_vial", 0.0) * np.eye(cells)
+    mixed = np.eye(cells) + own @ inner
+    shrink: Floats = np.asarray(np.linalg.solve(mixed, own), dtype=np.float64)
+    outer = inner - inner @ shrink @ inner
+    left = along - inner @ (shrink @ along)
+    square = block.square - float(taken @ block.run_square) - float(along @ shrink @ along)
+    volume = float(np.linalg.slogdet(mixed)[1]) - float(block.runs @ np.log(kept))
+    return _Absorbed(block, kept, shrink, inner, 0.5 * (outer + outer.T), along, left, square, volume)
 
 
 def _lowest(profile: _Profile) -> Floats:
