@@ -28,7 +28,8 @@ from qa.words import Floats, Ints, Quantity, State
 
 FIELD_SD = (0.1, 0.05, 0.05, 0.1)  # prior of the transmit field: level, slopes and bow, relative at 100 mm
 FIELD_REACH_MM = 100.0
-PROFILE_SD = 2.0  # prior of the profile's components, over their spread among the pulse pairs
+PROFILE_SD = 1.5  # prior of the profile's components, over their spread among the pulse pairs
+OTHER_PULSES = 1.3  # factor on what the profile adds to u: pulses that are not in the family, from simulated trials
 NOISE_SD = 0.2  # prior of the logarithm of the noise behind the floor, over what differences of voxels say
 FEW_VIALS = 3  # with fewer, the field is taken to be the same for all
 GUESSED_T1_OVER_T2 = 5.0
@@ -75,11 +76,10 @@ class EchoTrain:
         t1, u_log_t1 = _known_t1(signals, start)
         noise = float(np.nan_to_num(signals.noise))
         train = _train(signals, spacing, echoes, t1, 0.0 if signals.signed else noise)
-        train, found, weights, reduced = _robust_fit(values, train, signals, start)
-        size = spread(found, train, weights)
+        train, found, size, weights, reduced = _robust_fit(values, train, signals, start)
         u = found.t2_ms * np.sqrt(size.own[:, 0, 0])
         through_t1 = _through_t1(found, train, weights, u_log_t1)
-        u_model = found.t2_ms * np.hypot(np.sqrt(size.through_shared), through_t1)
+        u_model = found.t2_ms * np.hypot(OTHER_PULSES * np.sqrt(size.through_shared), through_t1)
         level = 1.0 + train.field @ found.shared[: train.field.shape[1]]
         covariance = np.zeros((n, 3, 3))
         turn = np.stack([found.t2_ms, found.m0], axis=1)
@@ -191,12 +191,13 @@ def _weights(amplitude: Floats, signals: Signals) -> Floats:
     return np.asarray(np.maximum(signals.voxels, 1.0)[:, None] / np.square(sd) * np.ones_like(amplitude))
 
 
-def _robust_fit(values: Floats, train: Train, signals: Signals, start: Floats) -> tuple[Train, Joint, Floats, Floats]:
+def _robust_fit(
+    values: Floats, train: Train, signals: Signals, start: Floats
+) -> tuple[Train, Joint, Spread, Floats, Floats]:
     """The joint fit, repeated with weights by what the residuals turn out to be; also the final weights.
 
     Without known noise the residuals of each vial stand in for it.
     """
-    freedom = values.shape[1] - 2
     plain = _weights(values, signals)
     if not signals.noise > 0:
         plain = plain / np.maximum((0.01 * np.max(np.abs(values), axis=1, keepdims=True)) ** 2, 1e-300)
@@ -207,12 +208,14 @@ def _robust_fit(values: Floats, train: Train, signals: Signals, start: Floats) -
         found = fit_jointly(values, train, weights, t2, shared)
         t2, shared = found.t2_ms, found.shared
         plain = _weights(found.amplitude, signals) if signals.noise > 0 else plain
+        size = spread(found, train, weights)
+        freedom = max(values.shape[1] - 2.0 - size.determined / max(len(values), 1), 1.0)
         reduced = np.einsum("nm,nm->n", plain, np.square(values - found.fitted)) / freedom
         if again == ROBUST_ROUNDS:
             break
         excess = np.maximum(reduced, 1e-6) if not signals.noise > 0 else residual_scale(reduced, freedom) ** 2
         weights = plain / excess[:, None]
-    return train, found, weights, reduced
+    return train, found, size, weights, reduced
 
 
 def _through_t1(found: Joint, train: Train, weights: Floats, u_log_t1: Floats) -> Floats:

@@ -12,6 +12,7 @@ from qa.fit.estimate import Estimate, Signals
 from qa.words import Floats, Quantity, State
 
 MOST_RELATIVE_U = 0.12  # a reading less certain than this (k = 1, noise) is not determined
+SHARED_FREEDOM = 20.0
 ROWS_FOR_MEDIAN = 5  # fewer rows do not tell what is common to all
 FLOOR_OVER_NOISE = 3.0  # an averaged signal must reach this many voxel noises to be above the floor
 
@@ -137,14 +138,16 @@ def mean_sd(signals: Signals) -> Floats:
     return np.asarray(np.nan_to_num(signals.noise) / np.sqrt(np.maximum(signals.voxels, 1.0)))[:, None]
 
 
-def residual_scale(reduced_chi2: Floats, freedom: int) -> Floats:
+def residual_scale(reduced_chi2: Floats, freedom: float) -> Floats:
     """Factor (n,) on u for residuals that are larger than the noise of one voxel explains.
 
-    Neighbouring voxels share noise where images were filtered or interpolated, and their averages are noisier then than
-    their number suggests. All rows of a run show that alike, so it is taken from their median (never below 1). A row
-    whose own residuals exceed even that (95 % of cases do not) gets its own factor.
+    Neighbouring voxels share noise where images were filtered or interpolated, and their averages are noisier then
+    than their number suggests. All rows of a run show that nearly alike, so a row's variance is drawn towards their
+    median, as if that were known with SHARED_FREEDOM degrees of freedom; never below what is expected. A row whose
+    own residuals exceed even the median (95 % of cases do not) gets its own factor.
 
-    Quantiles of chi2 / freedom are Wilson and Hilferty's (Proc Natl Acad Sci 17 (1931) 684-688).
+    Quantiles of chi2 / freedom are Wilson and Hilferty's (Proc Natl Acad Sci 17 (1931) 684-688); drawing variances
+    together: Smyth G K, Stat Appl Genet Mol Biol 3 (2004) 3.
     """
     if freedom < 1:
         return np.ones_like(reduced_chi2)
@@ -152,7 +155,8 @@ def residual_scale(reduced_chi2: Floats, freedom: int) -> Floats:
     median, limit = (1.0 - spread) ** 3, (1.0 - spread + 1.645 * np.sqrt(spread)) ** 3
     known = reduced_chi2[np.isfinite(reduced_chi2)]
     common = max(1.0, float(np.median(known)) / median) if len(known) >= ROWS_FOR_MEDIAN else 1.0
-    return np.sqrt(np.where(reduced_chi2 > limit * common, np.maximum(reduced_chi2, 0.0), common))
+    drawn = (SHARED_FREEDOM * common + freedom * reduced_chi2) / (SHARED_FREEDOM + freedom)
+    return np.sqrt(np.where(reduced_chi2 > limit * common, np.maximum(reduced_chi2, 0.0), np.maximum(drawn, 1.0)))
 
 
 def conclude(

@@ -227,6 +227,7 @@ class Spread:
     own: Floats  # (n, 2, 2), of ln T2 and ln M0 with the shared parameters held
     through_shared: Floats  # (n,), variance of ln T2 that the shared parameters bring in
     shared: Floats  # (s, s)
+    determined: float  # how many of the shared parameters the data determine rather than the priors
 
 
 def spread(found: Joint, train: Train, weights: Floats) -> Spread:
@@ -240,7 +241,8 @@ def spread(found: Joint, train: Train, weights: Floats) -> Spread:
         - np.einsum("nps,npr->sr", normal[:, :2, 2:], solved)
     )
     shared = np.linalg.inv(schur)
-    return Spread(own, np.einsum("ns,sr,nr->n", solved[:, 0], shared, solved[:, 0]), shared)
+    determined = len(shared) - float(np.sum(np.diag(shared) / np.square(train.prior_sd)))
+    return Spread(own, np.einsum("ns,sr,nr->n", solved[:, 0], shared, solved[:, 0]), shared, determined)
 
 
 def moved_by(found: Joint, weights: Floats, change: Floats) -> Floats:
