@@ -17,6 +17,7 @@ from command import ROOT, TODAY, vialbook
 from sqlalchemy import create_engine
 from store_contract import MeasuringContract
 from store_decisions import DecidingContract
+from store_mishaps import MishapContract
 
 from qa.store import open_book
 from qa.store.models import Base
@@ -49,12 +50,16 @@ def server():
     shutil.rmtree(place, ignore_errors=True)
 
 
-@pytest.fixture
-def url(server):
+def empty_database(server):
     name = f"book_{uuid.uuid4().hex[:10]}"
     with psycopg.connect(f"host={server} user={USER} dbname=postgres", autocommit=True) as connection:
         connection.execute(f"CREATE DATABASE {name}")
     return f"postgresql+psycopg://{USER}@/{name}?host={server}"
+
+
+@pytest.fixture
+def url(server):
+    return empty_database(server)
 
 
 class TestMeasuring(MeasuringContract):
@@ -63,6 +68,14 @@ class TestMeasuring(MeasuringContract):
 
 class TestDeciding(DecidingContract):
     pass
+
+
+class TestMishaps(MishapContract):
+    kills = 4
+
+    @pytest.fixture
+    def another_url(self, server):
+        return empty_database(server)
 
 
 def test_migrating_an_empty_server_gives_the_tables_of_the_models(url):
