@@ -13,7 +13,7 @@ import numpy as np
 
 from qa.words import Floats, Ints
 
-_MOST = 1e8  # no part is taken for more than so many times the rest
+_MOST = 1e6  # no part is taken for more than so many times the rest
 
 
 @dataclass(frozen=True, slots=True)
@@ -248,8 +248,8 @@ def _absorb(block: _Block, part: dict[str, float]) -> _Absorbed:
     own = part.get("scanner", 0.0) + part.get("scanner_vial", 0.0) * np.eye(cells)
     mixed = np.eye(cells) + own @ inner
     shrink: Floats = np.asarray(np.linalg.solve(mixed, own), dtype=np.float64)
-    outer = inner - inner @ shrink @ inner
-    left = along - inner @ (shrink @ along)
+    outer = np.linalg.solve(mixed.T, inner).T  # inner less inner @ shrink @ inner, without cancellation
+    left: Floats = np.asarray(np.linalg.solve(mixed.T, along), dtype=np.float64)
     square = block.square - float(taken @ block.run_square) - float(along @ shrink @ along)
     volume = float(np.linalg.slogdet(mixed)[1]) - float(block.runs @ np.log(kept))
     return _Absorbed(block, kept, shrink, inner, 0.5 * (outer + outer.T), along, left, square, volume)

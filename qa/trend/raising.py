@@ -22,8 +22,6 @@ from qa.words import Floats, Quantity, Verdict
 if TYPE_CHECKING:
     import pandas as pd
 
-RELEVANT = 0.1  # a change smaller than this part of the watch limit is no finding
-
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Raising:

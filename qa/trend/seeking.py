@@ -12,7 +12,8 @@ from qa.trend.changes import find_changes
 from qa.trend.findings import Finding
 from qa.trend.levels import FEWEST_VIALS
 from qa.trend.pooled import Course
-from qa.trend.raising import RELEVANT, Raising, stands
+from qa.trend.raising import Raising, stands
+from qa.trend.standing import RELEVANT
 from qa.trend.streams import Ints, natural
 from qa.words import Floats
 

@@ -13,6 +13,8 @@ from qa.trend.baseline import nanmedian
 from qa.trend.streams import Block, Bools, Ints
 from qa.words import Floats, Quantity
 
+RELEVANT = 0.1  # a shift smaller than this part of the watch limit is neither a finding nor a reason to watch
+
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Tolerance:

@@ -13,7 +13,7 @@ from qa.trend.charts import last_zero
 from qa.trend.judgements import StreamColumns, graded
 from qa.trend.levels import Lane
 from qa.trend.sentences import counted, percent, plain, vials
-from qa.trend.standing import Tolerance, standing
+from qa.trend.standing import RELEVANT, Tolerance, standing
 from qa.trend.streams import Block, Bools, Ints
 from qa.words import Floats, Verdict
 
@@ -59,7 +59,9 @@ class Weighing:
             columns = one.lane.columns
             self.sd[:, columns] = one.lane.sd_total
             self.smoothed[:, columns], self.limit[:, columns] = one.vials.percent, one.vials.limit
-            self.chart_signal[:, columns], self.z[:, columns] = one.vials.signal, one.vials.z
+            self.z[:, columns] = one.vials.z
+            relevant = ~(np.abs(one.vials.percent) < RELEVANT * self.baseline.watch[:, columns])
+            self.chart_signal[:, columns] = one.vials.signal & relevant
             guard[:, columns] = beyond_chance(share.reading, np.asarray(one.lane.vials.freedom))
         stated = np.where(np.isfinite(segment.u), segment.u, 0.0)
         self.from_baseline = standing(self.percent, self.sd, np.fmax(self.sd, stated), guard, self.baseline)
@@ -142,7 +144,8 @@ class Weighing:
         if common is None or level_of is None or not np.isfinite(level_of.percent[index]):
             return []
         level, u = float(level_of.percent[index]), float(level_of.sd[index])
-        if common.signal[index]:
+        watch = float(self.usual[number][0][index])
+        if common.signal[index] and not (np.isfinite(watch) and abs(common.percent[index]) < RELEVANT * watch):
             text = (
                 f"{name} of the whole scanner has moved since about {self._since(common.z[: index + 1])}: its smoothed "
                 f"level is {common.percent[index]:+.2f} % from its baseline, beyond what chance gives "
