@@ -1,7 +1,8 @@
 """T2 from a train of spin echoes, with stimulated echoes, a slice profile that is not known, and the noise floor.
 
 All vials of a run share one pair of pulses and a smooth transmit field. The early echoes of all of them together tell
-how the refocusing angle is spread over the slice, and each vial's T2 is fitted with that spread (`qa.fit.train`).
+how the refocusing angle is spread over the slice, and each vial's T2 is fitted with that spread (`qa.fit.train`). A
+profile that a recipe states would be a `Profiles` without components in place of `unknown_profiles`.
 
 References
 ----------
@@ -29,7 +30,7 @@ from qa.words import Floats, Ints, Quantity, State
 FIELD_SD = (0.1, 0.05, 0.05, 0.1)  # prior of the transmit field: level, slopes and bow, relative at 100 mm
 FIELD_REACH_MM = 100.0
 PROFILE_SD = 1.5  # prior of the profile's components, over their spread among the pulse pairs
-OTHER_PULSES = 1.3  # factor on what the profile adds to u: pulses that are not in the family, from simulated trials
+OTHER_PULSES = 1.15  # factor on what the profile adds to u: pulses that are not in the family, from simulated trials
 NOISE_SD = 0.2  # prior of the logarithm of the noise behind the floor, over what differences of voxels say
 FEW_VIALS = 3  # with fewer, the field is taken to be the same for all
 GUESSED_T1_OVER_T2 = 5.0
@@ -128,7 +129,7 @@ class EchoTrain:
         owner = np.asarray(vial, np.intp)
         centre = of_vials.value_ms
         known = np.flatnonzero(np.isfinite(centre))
-        if not known.size or "profile_1" not in of_vials.shared:
+        if not known.size or "transmit_level" not in of_vials.shared:
             return np.full(len(values), np.nan)
         curves = np.full((len(centre), len(GRID), len(signals.times_ms)), np.nan)
         curves[known] = _curves(signals, of_vials, owner, known)
@@ -158,7 +159,7 @@ def _train(signals: Signals, spacing: float, echoes: Ints, t1: Floats, noise: fl
         field = np.stack([np.ones(n), x, y, x * x + y * y], axis=1)
     profiles = unknown_profiles(round(float(signals.refocusing_deg), 1))
     sd = np.concatenate([FIELD_SD[: field.shape[1]], np.full(profiles.components.shape[1], PROFILE_SD), [NOISE_SD]])
-    usable_spacing = spacing if spacing > 0 else float(np.median(np.diff(signals.times_ms)))
+    usable_spacing = spacing if spacing > 0 else float(signals.times_ms[-1]) / len(echoes)
     return Train(usable_spacing, echoes, t1, signals.tr_ms, noise, field, profiles, sd)
 
 
