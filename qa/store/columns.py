@@ -28,6 +28,8 @@ def canonical(value: object) -> str:
 def plain(value: Any) -> Any:
     """`value` as JSON knows it: dates as ISO 8601, enumerations by value, tuples as lists, NaN and infinities as null.
 
+    Texts are cleaned: what comes out can be written as UTF-8.
+
     Raises
     ------
     StoreError
@@ -35,7 +37,9 @@ def plain(value: Any) -> Any:
     """
     if isinstance(value, Enum):
         return plain(value.value)
-    if value is None or isinstance(value, bool | str | int):
+    if isinstance(value, str):
+        return clean(value)
+    if value is None or isinstance(value, bool | int):
         return value
     if isinstance(value, float):
         return float(value) if isfinite(value) else None
@@ -44,7 +48,7 @@ def plain(value: Any) -> Any:
     if isinstance(value, date):
         return value.isoformat()
     if isinstance(value, Mapping):
-        return {str(key): plain(item) for key, item in value.items()}
+        return {clean(str(key)): plain(item) for key, item in value.items()}
     if isinstance(value, list | tuple | set | frozenset):
         items = sorted(value, key=str) if isinstance(value, set | frozenset) else value
         return [plain(item) for item in items]

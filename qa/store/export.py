@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import json
 from collections.abc import Callable
+from datetime import datetime
 from pathlib import Path
 from typing import TYPE_CHECKING, Any, Literal
 
@@ -15,6 +16,8 @@ if TYPE_CHECKING:
     from pandas import DataFrame
 
 Format = Literal["csv", "json", "parquet"]
+FINDING_COLUMNS = ("finding", "first_raised", "state")  # what every finding has; the trend analysis adds its own
+FORMULA_STARTS = ("=", "+", "-", "@", "\t", "\r", "\n", "＝", "＋", "－", "＠")
 TABLES = ("readings", "runs", "log", "held", "findings", "rulings", "limits", "ledger")
 
 
@@ -37,7 +40,7 @@ class Export(Desk):
             "runs": lambda: book.runs(generation="all"),
             "log": lambda: book.log_entries(),
             "held": lambda: book.held(resolved=True),
-            "findings": lambda: pd.DataFrame(book.findings()),
+            "findings": lambda: pd.DataFrame(book.findings() or {name: [] for name in FINDING_COLUMNS}),
             "rulings": lambda: book.rulings(),
             "limits": lambda: book.limits(),
             "ledger": lambda: book.ledger(),
@@ -70,8 +73,12 @@ class Export(Desk):
 
 
 def harmless(text: str) -> str:
-    """`text` so that no spreadsheet takes it for a formula; plain numbers stay as they are."""
-    if text[:1] in ("=", "+", "-", "@", "\t", "\r") and not _is_number(text):
+    """`text` so that no spreadsheet takes it for a formula; plain numbers stay as they are.
+
+    Signs that start a formula also in their wide forms (some spreadsheets read them so), and what is skipped ahead of
+    them; common practice.
+    """
+    if text[:1] in FORMULA_STARTS and not _is_number(text):
         return f"'{text}"
     return text
 
@@ -107,11 +114,12 @@ def _write_csv(frame: DataFrame, path: Path) -> None:
 
 def _write_json(frame: DataFrame, path: Path) -> None:
     rows = [{key: plain(_absent(value)) for key, value in row.items()} for row in frame.to_dict("records")]
-    path.write_text(json.dumps(rows, ensure_ascii=False, indent=1) + "\n", encoding="utf-8", errors="replace")
+    path.write_text(json.dumps(rows, ensure_ascii=False, indent=1) + "\n", encoding="utf-8")
 
 
 def _absent(value: Any) -> Any:
-    return None if (isinstance(value, float) and value != value) or str(value) == "NaT" else value
+    """None for NaN and NaT: they alone differ from themselves."""
+    return None if isinstance(value, float | datetime) and value != value else value
 
 
 def _write_parquet(frame: DataFrame, path: Path) -> None:
