@@ -29,6 +29,7 @@ class LevelScanner:
     h_flag: Flag | None
     k: float | None
     k_flag: Flag | None
+    k_critical: tuple[float, float] | None  # at 5 % and 1 %
 
 
 @dataclass(frozen=True, slots=True)

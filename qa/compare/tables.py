@@ -73,6 +73,7 @@ def _level(key: tuple[str, str], made: Sequence[Slab]) -> Level | None:
                 _flag(abs(h) if h is not None else None, flags.h_critical_5, flags.h_critical_1),
                 k,
                 _flag(k, float(flags.k_critical_5[place]), float(flags.k_critical_1[place])),
+                (float(flags.k_critical_5[place]), float(flags.k_critical_1[place])) if k is not None else None,
             )
         )
     return Level(
