@@ -82,7 +82,8 @@ def stable(campaigns):
 
 def kind_of(reason):
     """The kind of a reason, by its wording."""
-    for words in ("of the whole scanner has moved", "further than single runs", "moves apart", "beyond the", "No usable"):
+    known = ("of the whole scanner has moved", "further than single runs", "moves apart", "beyond the", "No usable")
+    for words in known:
         if words in reason:
             return words
     return reason
