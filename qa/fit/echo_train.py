@@ -30,7 +30,6 @@ from qa.words import Floats, Ints, Quantity, State
 FIELD_SD = (0.1, 0.05, 0.05, 0.1)  # prior of the transmit field: level, slopes and bow, relative at 100 mm
 FIELD_REACH_MM = 100.0
 PROFILE_SD = 1.5  # prior of the profile's components, over their spread among the pulse pairs
-OTHER_PULSES = 1.15  # factor on what the profile adds to u: pulses that are not in the family, from simulated trials
 NOISE_SD = 0.2  # prior of the logarithm of the noise behind the floor, over what differences of voxels say
 FEW_VIALS = 3  # with fewer, the field is taken to be the same for all
 GUESSED_T1_OVER_T2 = 5.0
@@ -80,7 +79,7 @@ class EchoTrain:
         train, found, size, weights, reduced = _robust_fit(values, train, signals, start)
         u = found.t2_ms * np.sqrt(size.own[:, 0, 0])
         through_t1 = _through_t1(found, train, weights, u_log_t1)
-        u_model = found.t2_ms * np.hypot(OTHER_PULSES * np.sqrt(size.through_shared), through_t1)
+        u_model = found.t2_ms * np.hypot(np.sqrt(size.through_shared), through_t1)
         level = 1.0 + train.field @ found.shared[: train.field.shape[1]]
         covariance = np.zeros((n, 3, 3))
         turn = np.stack([found.t2_ms, found.m0], axis=1)
