@@ -8,7 +8,7 @@ from __future__ import annotations
 
 import json
 from collections.abc import Mapping
-from dataclasses import asdict, is_dataclass
+from dataclasses import fields, is_dataclass
 from datetime import UTC, date, datetime
 from enum import Enum
 from math import isfinite
@@ -22,7 +22,15 @@ from qa.errors import StoreError
 
 def canonical(value: object) -> str:
     """One text per value: JSON with sorted keys, no spaces, ASCII only, no NaN (RFC 8785 in spirit)."""
-    return json.dumps(plain(value), sort_keys=True, separators=(",", ":"), ensure_ascii=True, allow_nan=False)
+    return _ENCODER.encode(plain(value))
+
+
+def canonical_row(values: Mapping[str, Any]) -> str:
+    """The same text as `canonical` gives, faster, for a row as stored: its values are plain but for times."""
+    try:
+        return _ENCODER.encode(values)
+    except ValueError:  # NaN: no row of ours holds one
+        return canonical(values)
 
 
 def plain(value: Any) -> Any:
@@ -35,14 +43,21 @@ def plain(value: Any) -> Any:
     StoreError
         For a value of a kind that cannot be stored.
     """
+    kind = type(value)
+    if kind is float:  # the commonest kinds first: curves are thousands of numbers
+        return value if isfinite(value) else None
+    if kind is str:
+        return clean(value)
+    if value is None or kind is int or kind is bool:
+        return value
     if isinstance(value, Enum):
         return plain(value.value)
     if isinstance(value, str):
         return clean(value)
-    if value is None or isinstance(value, bool | int):
-        return value
     if isinstance(value, float):
         return float(value) if isfinite(value) else None
+    if isinstance(value, int):
+        return value
     if isinstance(value, datetime):
         return in_utc(value).isoformat()
     if isinstance(value, date):
@@ -53,12 +68,15 @@ def plain(value: Any) -> Any:
         items = sorted(value, key=str) if isinstance(value, set | frozenset) else value
         return [plain(item) for item in items]
     if is_dataclass(value) and not isinstance(value, type):
-        return plain(asdict(value))
+        return {part.name: plain(getattr(value, part.name)) for part in fields(value)}
     if hasattr(value, "item") and getattr(value, "ndim", None) == 0:  # a NumPy scalar
         return plain(value.item())
     if hasattr(value, "tolist"):  # a NumPy array
         return plain(value.tolist())
     raise StoreError(f"a value of type {type(value).__name__} cannot be stored")
+
+
+_ENCODER = json.JSONEncoder(sort_keys=True, separators=(",", ":"), ensure_ascii=True, allow_nan=False, default=plain)
 
 
 def in_utc(when: datetime) -> datetime:

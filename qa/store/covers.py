@@ -11,7 +11,7 @@ from collections.abc import Callable, Iterable, Mapping
 from dataclasses import dataclass, field
 from typing import Any
 
-from qa.store.columns import canonical, stored_value
+from qa.store.columns import canonical_row, stored_value
 from qa.store.models import Base, EvidenceRow, FileRow, MeasurementRow, ReadingRow, RunRow
 from qa.store.records import FindingRow, HeldRow, LimitsRow, LimitsSetRow, LogEntryRow, RulingRow
 
@@ -41,7 +41,7 @@ class Cover:
             if value is None or name in self.leave_out or (self.only and name not in self.only):
                 continue
             values[name] = hashlib.sha256(value).hexdigest() if isinstance(value, bytes) else value
-        return canonical(values)
+        return canonical_row(values)
 
 
 COVERS = {

@@ -75,7 +75,7 @@ def reading_rows(readings: Sequence[Reading]) -> list[dict[str, Any]]:
 
 def evidence_rows(curves: Sequence[Curve], pictures: Sequence[Picture]) -> list[dict[str, Any]]:
     """All curves compressed in one row, and a row per picture; run and generation are still to be added."""
-    packed = zlib.compress(canonical([asdict(curve) for curve in curves]).encode("ascii"), level=1)
+    packed = zlib.compress(canonical(curves).encode("ascii"), level=1)
     rows: list[dict[str, Any]] = [{"kind": "curves", "about": {"curves": len(curves)}, "content": packed}]
     for picture in pictures:
         about = asdict(picture)
