@@ -7,6 +7,7 @@ import json
 import os
 import re
 from collections.abc import Mapping
+from contextlib import suppress
 from functools import cached_property
 from importlib.util import find_spec
 from pathlib import Path
@@ -73,7 +74,8 @@ class Output:
             spare.write_bytes(content)
             spare.replace(target)
         except OSError as error:
-            spare.unlink(missing_ok=True)
+            with suppress(OSError):
+                spare.unlink(missing_ok=True)
             what = f"a page cannot be written: {error.strerror or error}"
             raise ReportError(what, str(target), "Free the disk or give another folder with --out.") from error
         self.written.append(target)
