@@ -29,7 +29,8 @@ from qa.words import Floats, Ints, Quantity, State
 
 FIELD_SD = (0.1, 0.05, 0.05, 0.1)  # prior of the transmit field: level, slopes and bow, relative at 100 mm
 FIELD_REACH_MM = 100.0
-PROFILE_SD = 1.5  # prior of the profile's components, over their spread among the pulse pairs
+PROFILE_SD = 1.5  # prior of the profile's components, over their spread among the pulse pairs, but at least
+WIDER = 1.5  # times what the components turn out to be
 NOISE_SD = 0.2  # prior of the logarithm of the noise behind the floor, over what differences of voxels say
 FEW_VIALS = 3  # with fewer, the field is taken to be the same for all
 GUESSED_T1_OVER_T2 = 5.0
@@ -215,7 +216,17 @@ def _robust_fit(
             break
         excess = np.maximum(reduced, 1e-6) if not signals.noise > 0 else residual_scale(reduced, freedom) ** 2
         weights = plain / excess[:, None]
+        train = _widened(train, shared)
     return train, found, size, weights, reduced
+
+
+def _widened(train: Train, shared: Floats) -> Train:
+    """The train with a wider prior where its own profile turns out to be further from the mean than most pulses are."""
+    fields = train.field.shape[1]
+    sizes = float(np.sqrt(np.mean(np.square(shared[fields:-1]))))
+    prior = train.prior_sd.copy()
+    prior[fields:-1] = max(PROFILE_SD, WIDER * sizes)
+    return replace(train, prior_sd=prior)
 
 
 def _through_t1(found: Joint, train: Train, weights: Floats, u_log_t1: Floats) -> Floats:
