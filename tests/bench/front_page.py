@@ -25,12 +25,11 @@ SCANNERS = ("North bay", "South bay", "East bay", "West bay")
 
 def site_of(folder):
     make_site(folder, "Bench")
-    phantom = '[[phantom]]
+    phantom = """[[phantom]]
 name = "Plate A"
 plate = "plates/plate.toml"
-match = { PatientID = "A" }'
-    blocks = ['[site]
-name = "Bench"', phantom]
+match = { PatientID = "A" }"""
+    blocks = ["[site]", 'name = "Bench"', phantom]
     for name in SCANNERS:
         blocks.append(f'[[scanner]]\nname = "{name}"\nfield_t = 3.0\nmatch = {{ StationName = "{name}" }}')
         blocks.append(f'[[schedule]]\nscanner = "{name}"\nphantom = "Plate A"\nrecipe = "recipes/weekly.toml"')
