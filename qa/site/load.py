@@ -181,6 +181,9 @@ def _unique(file: TomlFile, table: str, names: list[str]) -> None:
 
 def _inside(file: TomlFile, folder: Path, table: str, index: int, key: str, relative: str) -> Path:
     """A path that the user wrote relative to the site folder; one that leaves the folder is complained about."""
+    if "\0" in relative:
+        file.complain(f"{relative!r} is no path", table, index, key)
+        return folder
     path = (folder / relative).resolve()
     if not path.is_relative_to(folder):
         file.complain(f"'{relative}' lies outside the site folder", table, index, key)

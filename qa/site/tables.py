@@ -155,6 +155,10 @@ def _sentence(item: Any, table: str, where: list[str], fields: list[str]) -> str
         expected = str(context.get("expected", ""))
         near = nearest(str(given), re.findall(r"'([^']*)'", expected))
         return f"'{key}' in [{table}] is {given!r}; it must be {expected}{near if 'mean' in near else ''}"
+    if kind in {"tuple_type", "list_type"}:
+        return f"'{key}' in [{table}] is {given!r}: write a list in square brackets"
+    if kind == "dict_type":
+        return f"'{key}' in [{table}] is {given!r}: write a table in curly brackets"
     if kind in {"too_short", "string_too_short"}:
         return f"'{key}' in [{table}] is too short or empty ({item['msg'].lower()})"
     return f"'{key}' in [{table}] is {given!r}: {item['msg'][0].lower() + item['msg'][1:]}"

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import csv
+import io
 from collections.abc import Sequence
 from dataclasses import dataclass
 from datetime import date, datetime, time
@@ -12,6 +13,7 @@ from zoneinfo import ZoneInfo
 from qa.errors import SiteError
 
 COLUMNS = ("scanner", "date", "celsius")
+FIRST_YEAR = 1970  # before it, a slip of the pen
 POSSIBLE_C = (0.0, 50.0)  # outside it, a slip of the pen (or Fahrenheit)
 
 
@@ -49,33 +51,44 @@ def read_temperatures(path: Path, scanners: Sequence[str], zone: ZoneInfo) -> Te
     """
     if not path.exists():
         return TemperatureTable()
+    try:
+        text = path.read_bytes().decode("utf-8-sig")
+    except UnicodeDecodeError as error:
+        raise SiteError("is not UTF-8 text", str(path), "Save it as UTF-8 in your editor.") from error
+    except OSError as error:
+        raise SiteError(f"cannot be read: {error.strerror}", str(path)) from error
     entries, wrong = [], []
-    with path.open(newline="", encoding="utf-8-sig") as file:
-        rows = csv.reader(line if not line.lstrip().startswith("#") else "\n" for line in file)
-        header: list[str] | None = None
+    rows = csv.reader("\n" if line.lstrip().startswith("#") else line for line in io.StringIO(text, newline=""))
+    header: list[str] | None = None
+    try:
         for row in rows:
-            if not any(cell.strip() for cell in row):
-                continue
             cells = [cell.strip() for cell in row]
+            if not any(cells):
+                continue
             if header is None:
                 header = [cell.lower() for cell in cells]
                 if sorted(header) != sorted(COLUMNS):
-                    raise SiteError(f"line {rows.line_num}: the columns must be {','.join(COLUMNS)}", str(path))
+                    what = f"line {rows.line_num}: the columns must be {','.join(COLUMNS)}, with commas between them"
+                    raise SiteError(what, str(path), f"The line reads: {','.join(row)[:80]}")
                 continue
-            entry = _entry(dict(zip(header, cells, strict=False)), scanners, zone)
+            entry = _entry(header, cells, scanners, zone)
             if isinstance(entry, str):
                 wrong.append(f"line {rows.line_num}: {entry}")
             else:
                 entries.append(entry)
+    except csv.Error as error:
+        raise SiteError(f"line {rows.line_num}: {error}", str(path), "Is this a CSV file?") from error
     if wrong:
         raise SiteError("\n  ".join(wrong), str(path), "Mend these lines and run the command again.")
     return TemperatureTable(tuple(entries))
 
 
-def _entry(row: dict[str, str], scanners: Sequence[str], zone: ZoneInfo) -> TemperatureEntry | str:
+def _entry(header: list[str], cells: list[str], scanners: Sequence[str], zone: ZoneInfo) -> TemperatureEntry | str:
     """One line as an entry, or the sentence that says what is wrong with it."""
-    if set(row) != set(COLUMNS):
-        return f"{len(row)} values where {len(COLUMNS)} are needed ({','.join(COLUMNS)})"
+    if len(cells) != len(header):
+        hint = "; write 20.4 with a point, not a comma" if len(cells) == len(header) + 1 else ""
+        return f"{len(cells)} values where {len(header)} are needed ({','.join(header)}){hint}"
+    row = dict(zip(header, cells, strict=True))
     if row["scanner"] not in scanners:
         return f"site.toml has no scanner '{row['scanner']}'; it has: {', '.join(scanners)}"
     try:
@@ -88,6 +101,8 @@ def _entry(row: dict[str, str], scanners: Sequence[str], zone: ZoneInfo) -> Temp
         return f"'{row['date']}' is not a date: write it like 2026-03-02 or 2026-03-02T07:31"
     if when.tzinfo is None:
         when = when.replace(tzinfo=zone)
+    if when.year < FIRST_YEAR:
+        return f"'{row['date']}' is too long ago"
     try:
         celsius = float(row["celsius"])
     except ValueError:

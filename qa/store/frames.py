@@ -6,7 +6,7 @@ from collections.abc import Sequence
 from datetime import date, datetime
 from typing import TYPE_CHECKING, Any, Literal
 
-from sqlalchemy import Connection, Select, Text, and_, func, select, tuple_, type_coerce
+from sqlalchemy import Connection, Select, Text, and_, exists, select, type_coerce
 
 from qa.errors import StoreError
 from qa.reading import Curve, Measurement, Picture
@@ -174,14 +174,16 @@ def _chosen(
         query = query.where(_RUN.phantom == phantom)
     if since is not None:
         query = query.where(_M.acquired >= as_instant(since))
-    by_then = _M.measured_at <= as_instant(as_of, end=True) if as_of is not None else None
-    if by_then is not None:
-        query = query.where(by_then)
+    later = MeasurementRow.__table__.alias("later")
+    is_later = and_(later.c.run == _M.run, later.c.generation > _M.generation)
+    if as_of is not None:
+        then = as_instant(as_of, end=True)
+        query = query.where(_M.measured_at <= then)
+        is_later = and_(is_later, later.c.measured_at <= then)
     if isinstance(generation, int):
         return query.where(_M.generation == generation)
-    if generation == "newest":
-        newest = select(_M.run, func.max(_M.generation)).group_by(_M.run)
-        query = query.where(tuple_(_M.run, _M.generation).in_(newest if by_then is None else newest.where(by_then)))
+    if generation == "newest":  # asked run by run: costs nothing for the runs that are not asked for
+        query = query.where(~exists(select(later.c.run).where(is_later).correlate(MeasurementRow.__table__)))
     return query
 
 
