@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import json
 from collections.abc import Mapping
 
 SCANNER_KEYS = ("DeviceSerialNumber", "StationName", "ManufacturerModelName", "Manufacturer")
@@ -17,14 +16,15 @@ def scanner_block(facts: Mapping[str, str]) -> str:
     shown = f"{field_t:g}" if field_t else "0.0                       # tesla: fill in"
     if field_t and "." not in shown:
         shown += ".0"
-    name = facts.get("StationName") or facts.get("ManufacturerModelName") or "New scanner"
+    names = (facts.get(key, "").strip() for key in ("StationName", "ManufacturerModelName"))
+    name = next(filter(None, names), "New scanner")
     return f"[[scanner]]\nname = {quoted(name)}\nfield_t = {shown}\nmatch = {_match(keys, facts)}"
 
 
 def phantom_block(facts: Mapping[str, str], plate: str = "plates/….toml") -> str:
     """A [[phantom]] table that matches these header facts; `plate` is the file to name if there is only one."""
     keys = [key for key in PHANTOM_KEYS if facts.get(key, "").strip()]
-    name = facts.get("PatientID") or "New phantom"
+    name = facts.get("PatientID", "").strip() or "New phantom"
     return f'[[phantom]]\nname = {quoted(name)}\nserial = ""\nplate = {quoted(plate)}\nmatch = {_match(keys, facts)}'
 
 
@@ -37,9 +37,19 @@ def schedule_block(scanner: str, phantom: str, recipe: str = "recipes/weekly.tom
 
 
 def quoted(text: str) -> str:
-    """A TOML basic string: JSON's escapes are a subset of TOML's, but for DEL and lone surrogates."""
-    clean = "".join(c for c in text if c.isprintable())
-    return json.dumps(clean, ensure_ascii=False)
+    """A TOML basic string that reads back as `text`; what does not print is escaped, and lone surrogates are left out."""
+    return '"' + "".join(_shown(character) for character in text) + '"'
+
+
+def _shown(character: str) -> str:
+    code = ord(character)
+    if 0xD800 <= code <= 0xDFFF:
+        return ""
+    if character in ('"', "\\"):
+        return f"\\{character}"
+    if character.isprintable():
+        return character
+    return f"\\u{code:04x}" if code <= 0xFFFF else f"\\U{code:08x}"
 
 
 def _match(keys: list[str], facts: Mapping[str, str]) -> str:
