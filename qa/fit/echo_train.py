@@ -36,7 +36,8 @@ FEW_VIALS = 3  # with fewer, the field is taken to be the same for all
 GUESSED_T1_OVER_T2 = 5.0
 LONGEST_T1_MS = 4500.0  # of a liquid at room temperature, with a margin over pure water
 U_LOG_GUESSED_T1 = 0.7
-ROBUST_ROUNDS = 1
+ROUNDS = 3  # of the fit, at most; two where no vial is spoilt
+SPOILT = 9.0  # times the median excess of the residuals' variance
 
 
 @dataclass(frozen=True, slots=True)
@@ -203,8 +204,8 @@ def _robust_fit(
     if not signals.noise > 0:
         plain = plain / np.maximum((0.01 * np.max(np.abs(values), axis=1, keepdims=True)) ** 2, 1e-300)
     weights = plain
-    t2, shared = start, np.zeros(len(train.prior_sd))
-    for again in range(ROBUST_ROUNDS + 1):
+    t2, shared, finishing = start, np.zeros(len(train.prior_sd)), False
+    for rounds_left in range(ROUNDS - 1, -1, -1):
         train = with_recovery(train, t2, shared)
         found = fit_jointly(values, train, weights, t2, shared)
         t2, shared = found.t2_ms, found.shared
@@ -212,11 +213,14 @@ def _robust_fit(
         size = spread(found, train, weights)
         freedom = max(values.shape[1] - 2.0 - size.determined / max(len(values), 1), 1.0)
         reduced = np.einsum("nm,nm->n", plain, np.square(values - found.fitted)) / freedom
-        if again == ROBUST_ROUNDS:
+        if rounds_left == 0 or finishing:
             break
         excess = np.maximum(reduced, 1e-6) if not signals.noise > 0 else residual_scale(reduced, freedom) ** 2
+        spoilt = len(excess) > 0 and bool(np.max(excess) > SPOILT * np.median(excess))
+        finishing = rounds_left == 1 or not spoilt
         weights = plain / excess[:, None]
-        train = _widened(train, shared)
+        if finishing:  # a spoilt vial bends the profile, so the profile is judged without it
+            train = _widened(train, shared)
     return train, found, size, weights, reduced
 
 
