@@ -37,7 +37,7 @@ def schedule_block(scanner: str, phantom: str, recipe: str = "recipes/weekly.tom
 
 
 def quoted(text: str) -> str:
-    """A TOML basic string that reads back as `text`; what does not print is escaped, and lone surrogates are left out."""
+    """A TOML basic string that reads back as `text`; what does not print is escaped, lone surrogates are left out."""
     return '"' + "".join(_shown(character) for character in text) + '"'
 
 

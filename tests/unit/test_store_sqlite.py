@@ -39,7 +39,7 @@ class TestDecidingInMemory(InMemory, DecidingContract):
     pass
 
 
-@settings(max_examples=40)
+@settings(max_examples=20)
 @given(measured=measurements)
 def test_a_measurement_comes_back_as_it_was_and_the_audit_is_content(measured):
     one = session("North bay", "Plate A", START)
