@@ -13,15 +13,18 @@ import psycopg
 import pytest
 from alembic.autogenerate import compare_metadata
 from alembic.migration import MigrationContext
+from book_factory import fill
 from command import ROOT, TODAY, vialbook
 from sqlalchemy import create_engine
 from store_contract import MeasuringContract
 from store_decisions import DecidingContract
 from store_mishaps import MishapContract
+from store_next_version import NEXT, become_next_version
 
-from qa.store import open_book
+from qa.errors import OldBookError
+from qa.store import migrate, open_book
 from qa.store.models import Base
-from qa.store.revision import VERSION_TABLE
+from qa.store.revision import HEAD, VERSION_TABLE
 
 pytestmark = pytest.mark.postgres
 USER = "vialbook"
@@ -85,6 +88,22 @@ def test_migrating_an_empty_server_gives_the_tables_of_the_models(url):
         context = MigrationContext.configure(connection, opts={"compare_type": True, "version_table": VERSION_TABLE})
         assert compare_metadata(context, Base.metadata) == []
     engine.dispose()
+
+
+def test_an_older_book_is_refused_then_migrated_in_place(url, monkeypatch, tmp_path):
+    with open_book(url) as book:
+        fill(book, weeks=1, vials=4)
+        before = book.readings()
+    become_next_version(monkeypatch, tmp_path)
+    with pytest.raises(OldBookError, match=r"pg_dump(.|\n)*vialbook migrate"):
+        open_book(url)
+    done = migrate(url)
+    assert (done.before, done.after, done.copy) == (HEAD, NEXT, None)
+    assert "pg_dump" in done.advice
+    with open_book(url) as book:
+        assert book.readings().equals(before)
+        assert list(book.ledger()["kind"])[-1] == "migrated"
+        assert book.audit() == []
 
 
 def test_the_main_job_and_two_ingests_at_once(fresh_site, url):

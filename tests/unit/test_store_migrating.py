@@ -12,13 +12,11 @@ from alembic.autogenerate import compare_metadata
 from alembic.migration import MigrationContext
 from book_factory import fill
 from sqlalchemy import create_engine
+from store_next_version import NEXT, become_next_version
 
 from qa.errors import NoBookError, OldBookError, StoreError
 from qa.intake.series import Held
-from qa.places import shipped
-from qa.store import migrate, migrating, open_book
-from qa.store import opening as opening_module
-from qa.store import revision as revision_module
+from qa.store import migrate, open_book
 from qa.store.models import Base
 from qa.store.revision import HEAD, VERSION_TABLE
 
@@ -71,30 +69,15 @@ def test_migrating_what_is_up_to_date_does_nothing(tmp_path):
 
 
 def test_migrating_copies_the_book_first_and_keeps_every_row(tmp_path, monkeypatch):
-    """A next version's migration stands in: it adds a table."""
-    scripts = tmp_path / "migrations"
-    original = shipped("migrations")
-    (scripts / "versions").mkdir(parents=True)
-    for name in ("env.py", "script.py.mako"):
-        (scripts / name).write_bytes((original / name).read_bytes())
-    for path in (original / "versions").glob("*.py"):
-        (scripts / "versions" / path.name).write_bytes(path.read_bytes())
-    (scripts / "versions" / "0002_more.py").write_text(
-        'import sqlalchemy as sa\nfrom alembic import op\nrevision = "0002_more"\n'
-        f'down_revision = "{HEAD}"\nbranch_labels = depends_on = None\n'
-        'def upgrade():\n    op.create_table("more", sa.Column("id", sa.Integer(), primary_key=True))\n'
-    )
     path = tmp_path / "book.sqlite"
     with open_book(path) as book:
         fill(book, weeks=2)
         before = book.readings()
-    for module in (revision_module, migrating, opening_module):
-        monkeypatch.setattr(module, "HEAD", "0002_more")
-    monkeypatch.setattr(migrating, "shipped", lambda name: scripts)
+    become_next_version(monkeypatch, tmp_path)
     with pytest.raises(OldBookError, match="older version"):
         open_book(path)
     done = migrate(path)
-    assert (done.before, done.after) == (HEAD, "0002_more")
+    assert (done.before, done.after) == (HEAD, NEXT)
     assert done.copy is not None
     assert str(done.copy) in done.advice
     with open_book(path) as book:
