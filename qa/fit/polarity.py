@@ -105,8 +105,9 @@ def _newton(y: Floats, t: Floats, rate: Floats, left: Floats, right: Floats) -> 
         left, right = np.where(slope > 0, rate, left), np.where(slope > 0, right, rate)
         change = np.where(curve_log < 0, -slope_log / np.where(curve_log < 0, curve_log, -1.0), np.inf)
         new = rate * np.exp(np.clip(change, -3.0, 3.0))
-        new = np.where((new > left) & (new < right), new, np.sqrt(left * right))
-        moved = np.abs(new - rate) > SETTLED * rate
+        inside = (new >= left) & (new <= right)  # at the optimum the step is zero, and one end lies there
+        new = np.where(inside, new, np.sqrt(left * right))
+        moved = ~inside | (np.abs(new - rate) > SETTLED * rate)
         rate = new
         if step >= 2 and not moved.any():
             break
